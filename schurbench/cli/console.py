@@ -1,0 +1,185 @@
+"""What the commands print, and where: data to stdout, progress and faults to stderr."""
+
+from __future__ import annotations
+
+import json
+import math
+import signal
+import sys
+import threading
+import time
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
+from enum import Enum
+from pathlib import PurePath
+from types import FrameType
+from typing import TYPE_CHECKING, Any, TextIO
+
+if TYPE_CHECKING:
+    from schurbench.journal import Progress
+
+__all__ = ["Console", "interruptible", "number", "plain"]
+
+#: Seconds between two progress lines where stderr is a file or a pipe; a terminal is rewritten more often.
+SECONDS_BETWEEN_LINES = 10.0
+SECONDS_BETWEEN_REWRITES = 0.1
+
+_SUPERSCRIPTS = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
+
+
+class Console:
+    """The two streams of a command, with a progress line that never mixes with the data."""
+
+    def __init__(self, out: TextIO | None = None, err: TextIO | None = None) -> None:
+        self._out = sys.stdout if out is None else out
+        self._err = sys.stderr if err is None else err
+        for stream in (self._out, self._err):
+            # A terminal that cannot show a Greek letter gets a question mark, not a UnicodeEncodeError.
+            reconfigure = getattr(stream, "reconfigure", None)
+            if reconfigure is not None:
+                reconfigure(errors="replace")
+        self._tty = self._err.isatty()
+        self._shown = 0
+        self._last = time.monotonic()
+
+    def say(self, text: str = "") -> None:
+        """One line, or several, of data on stdout."""
+        self._clear()
+        print(text, file=self._out)
+
+    def json(self, value: object) -> None:
+        """Strict JSON on stdout: numbers that JSON lacks (NaN, infinities) become null."""
+        self.say(json.dumps(plain(value), allow_nan=False, indent=2))
+
+    def table(self, header: Sequence[str], rows: Sequence[Sequence[object]], indent: int = 2) -> None:
+        """An aligned table: words to the left, numbers to the right."""
+        cells = [[number(cell) if not isinstance(cell, str) else cell for cell in row] for row in rows]
+        lines = [list(header), *cells]
+        widths = [max(len(line[column]) for line in lines) for column in range(len(header))]
+        words = [all(isinstance(row[column], str) for row in rows) for column in range(len(header))]
+        for line in lines:
+            padded = [
+                cell.ljust(width) if word else cell.rjust(width)
+                for cell, width, word in zip(line, widths, words, strict=True)
+            ]
+            self.say((" " * indent + "  ".join(padded)).rstrip())
+
+    def note(self, text: str) -> None:
+        """One line about the work on stderr."""
+        self._clear()
+        print(text, file=self._err, flush=True)
+
+    def fail(self, message: str) -> None:
+        """The one line that ends a command that could not be carried out."""
+        line = " ".join(message.split())
+        self.note(f"schurbench: {line}")
+
+    def progress(self, n: int, what: str = "") -> Callable[[Progress], None]:
+        """A callback for `schurbench.iterate` on a matrix of order `n`."""
+        prefix = f"{what}: " if what else ""
+
+        def show(event: Progress) -> None:
+            if event.phase == "done":
+                self._clear()
+            elif event.phase == "reduce":
+                self.status(f"{prefix}reducing to Hessenberg form, {number(event.seconds)} s")
+            else:
+                left = "" if event.forecast is None else f", about {number(event.forecast)} s left"
+                self.status(
+                    f"{prefix}{event.sweeps} sweeps, {event.deflated} of {n} rows final, "
+                    f"window {event.window[0]} to {event.window[1]}, {number(event.seconds)} s{left}"
+                )
+
+        return show
+
+    def status(self, text: str) -> None:
+        """Say where the work is: one rewritten line in a terminal, an occasional line elsewhere."""
+        now = time.monotonic()
+        if now - self._last < (SECONDS_BETWEEN_REWRITES if self._tty else SECONDS_BETWEEN_LINES):
+            return
+        self._last = now
+        if self._tty:
+            self._err.write("\r" + text[:119].ljust(self._shown))
+            self._shown = len(text[:119])
+        else:
+            self._err.write(text + "\n")
+        self._err.flush()
+
+    def close(self) -> None:
+        """Leave both streams tidy; a closed pipe shows here at the latest."""
+        self._clear()
+        self._out.flush()
+
+    def _clear(self) -> None:
+        if self._shown:
+            self._err.write("\r" + " " * self._shown + "\r")
+            self._err.flush()
+            self._shown = 0
+
+
+@contextmanager
+def interruptible() -> Iterator[threading.Event]:
+    """An event that Ctrl-C sets, so that the work ends between two steps and can be written.
+
+    A second Ctrl-C interrupts at once.
+    """
+    cancel = threading.Event()
+    if threading.current_thread() is not threading.main_thread():
+        yield cancel
+        return
+
+    def ask_to_stop(signum: int, frame: FrameType | None) -> None:
+        if cancel.is_set():
+            raise KeyboardInterrupt
+        cancel.set()
+
+    previous = signal.signal(signal.SIGINT, ask_to_stop)
+    try:
+        yield cancel
+    finally:
+        signal.signal(signal.SIGINT, previous)
+
+
+def number(value: object) -> str:
+    """A value to three digits, powers of ten as 10⁻⁷; a dash where there is none."""
+    if value is None:
+        return "–"
+    if isinstance(value, bool):
+        return "yes" if value else "no"
+    if isinstance(value, int):
+        return str(value)
+    if isinstance(value, complex):
+        if value.imag == 0.0:
+            return number(value.real)
+        sign = "−" if math.copysign(1.0, value.imag) < 0.0 else "+"
+        return f"{number(value.real)} {sign} {number(abs(value.imag))}i"
+    if isinstance(value, float):
+        mantissa, _, exponent = f"{value:.3g}".partition("e")
+        if not exponent:
+            return mantissa
+        power = "10" + str(int(exponent)).translate(_SUPERSCRIPTS)
+        return power if mantissa == "1" else f"{mantissa}·{power}"
+    return str(value)
+
+
+def plain(value: object) -> Any:
+    """The same value in the types that JSON has."""
+    if value is None or isinstance(value, str | bool | int):
+        return value.value if isinstance(value, Enum) else value
+    if isinstance(value, float):
+        return float(value) if math.isfinite(value) else None
+    if isinstance(value, complex):
+        return [plain(value.real), plain(value.imag)]
+    if isinstance(value, Mapping):
+        return {str(key): plain(item) for key, item in value.items()}
+    if isinstance(value, Enum):
+        return plain(value.value)
+    if isinstance(value, PurePath):
+        return str(value)
+    if hasattr(value, "tolist"):  # numpy scalars and arrays, without importing numpy
+        return plain(value.tolist())
+    if hasattr(value, "to_dict"):
+        return plain(value.to_dict())
+    if isinstance(value, set | frozenset):
+        return sorted(plain(item) for item in value)
+    return [plain(item) for item in value]  # type: ignore[attr-defined]

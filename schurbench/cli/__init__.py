@@ -80,5 +80,7 @@ def _carry_out(command: str, arguments: object, console: Console) -> int:
     except Exception as error:
         if os.environ.get(DEBUG_VARIABLE):
             raise
-        console.fail(f"unexpected {type(error).__name__}: {error}; set {DEBUG_VARIABLE}=1 to see where, and please report it.")
+        console.fail(
+            f"unexpected {type(error).__name__}: {error}; set {DEBUG_VARIABLE}=1 to see where, and please report it."
+        )
         return FAULT

@@ -3,28 +3,23 @@
 from __future__ import annotations
 
 import json
-import math
 import signal
 import sys
 import threading
 import time
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
-from enum import Enum
-from pathlib import PurePath
 from types import FrameType
-from typing import TYPE_CHECKING, Any, TextIO
+from typing import TYPE_CHECKING, TextIO
 
 if TYPE_CHECKING:
     from schurbench.journal import Progress
 
-__all__ = ["Console", "interruptible", "number", "plain"]
+__all__ = ["Console", "figure", "interruptible"]
 
 #: Seconds between two progress lines where stderr is a file or a pipe; a terminal is rewritten more often.
 SECONDS_BETWEEN_LINES = 10.0
 SECONDS_BETWEEN_REWRITES = 0.1
-
-_SUPERSCRIPTS = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 
 
 class Console:
@@ -48,12 +43,14 @@ class Console:
         print(text, file=self._out)
 
     def json(self, value: object) -> None:
-        """Strict JSON on stdout: numbers that JSON lacks (NaN, infinities) become null."""
+        """Strict JSON on stdout: infinities become the strings "inf" and "-inf", NaN becomes null."""
+        from schurbench.prepare.plain import plain
+
         self.say(json.dumps(plain(value), allow_nan=False, indent=2))
 
     def table(self, header: Sequence[str], rows: Sequence[Sequence[object]], indent: int = 2) -> None:
         """An aligned table: words to the left, numbers to the right."""
-        cells = [[number(cell) if not isinstance(cell, str) else cell for cell in row] for row in rows]
+        cells = [[figure(cell) for cell in row] for row in rows]
         lines = [list(header), *cells]
         widths = [max(len(line[column]) for line in lines) for column in range(len(header))]
         words = [all(isinstance(row[column], str) for row in rows) for column in range(len(header))]
@@ -82,12 +79,12 @@ class Console:
             if event.phase == "done":
                 self._clear()
             elif event.phase == "reduce":
-                self.status(f"{prefix}reducing to Hessenberg form, {number(event.seconds)} s")
+                self.status(f"{prefix}reducing to Hessenberg form, {figure(event.seconds)} s")
             else:
-                left = "" if event.forecast is None else f", about {number(event.forecast)} s left"
+                left = "" if event.forecast is None else f", about {figure(event.forecast)} s left"
                 self.status(
                     f"{prefix}{event.sweeps} sweeps, {event.deflated} of {n} rows final, "
-                    f"window {event.window[0]} to {event.window[1]}, {number(event.seconds)} s{left}"
+                    f"window {event.window[0]} to {event.window[1]}, {figure(event.seconds)} s{left}"
                 )
 
         return show
@@ -140,46 +137,16 @@ def interruptible() -> Iterator[threading.Event]:
         signal.signal(signal.SIGINT, previous)
 
 
-def number(value: object) -> str:
-    """A value to three digits, powers of ten as 10⁻⁷; a dash where there is none."""
+def figure(value: object) -> str:
+    """A cell of a table: numbers to three digits, a dash where there is none."""
+    from schurbench.prepare.plain import number
+
     if value is None:
         return "–"
     if isinstance(value, bool):
         return "yes" if value else "no"
     if isinstance(value, int):
         return str(value)
-    if isinstance(value, complex):
-        if value.imag == 0.0:
-            return number(value.real)
-        sign = "−" if math.copysign(1.0, value.imag) < 0.0 else "+"
-        return f"{number(value.real)} {sign} {number(abs(value.imag))}i"
     if isinstance(value, float):
-        mantissa, _, exponent = f"{value:.3g}".partition("e")
-        if not exponent:
-            return mantissa
-        power = "10" + str(int(exponent)).translate(_SUPERSCRIPTS)
-        return power if mantissa == "1" else f"{mantissa}·{power}"
+        return number(value)
     return str(value)
-
-
-def plain(value: object) -> Any:
-    """The same value in the types that JSON has."""
-    if value is None or isinstance(value, str | bool | int):
-        return value.value if isinstance(value, Enum) else value
-    if isinstance(value, float):
-        return float(value) if math.isfinite(value) else None
-    if isinstance(value, complex):
-        return [plain(value.real), plain(value.imag)]
-    if isinstance(value, Mapping):
-        return {str(key): plain(item) for key, item in value.items()}
-    if isinstance(value, Enum):
-        return plain(value.value)
-    if isinstance(value, PurePath):
-        return str(value)
-    if hasattr(value, "tolist"):  # numpy scalars and arrays, without importing numpy
-        return plain(value.tolist())
-    if hasattr(value, "to_dict"):
-        return plain(value.to_dict())
-    if isinstance(value, set | frozenset):
-        return sorted(plain(item) for item in value)
-    return [plain(item) for item in value]  # type: ignore[attr-defined]

@@ -72,7 +72,9 @@ def build_parser() -> argparse.ArgumentParser:
 
     explain = add("explain", _positional("FILE|RUN", "matrix file or saved run"), source, settings, json, replace)
     explain.add_argument("--html", metavar="OUT", type=Path, help="also write the explanation as one page")
-    explain.add_argument("--try", dest="try_remedies", action="store_true", help="run each remedy and say what it brought")
+    explain.add_argument(
+        "--try", dest="try_remedies", action="store_true", help="run each remedy and say what it brought"
+    )
 
     compare = add("compare", _positional("FILE", "matrix file"), source, settings, json)
     compare.add_argument(
@@ -102,17 +104,23 @@ def build_parser() -> argparse.ArgumentParser:
     add("check", _positional("MANIFEST", "manifest beside saved factors (.json)"), json)
     add("twin", _positional("FILE", "matrix file"), source, settings, json)
 
-    survey = add("survey", _positional("SOURCE", "folder with matrix files, or one file with many"), settings, json, replace)
+    survey = add(
+        "survey", _positional("SOURCE", "folder with matrix files, or one file with many"), settings, json, replace
+    )
     survey.add_argument("-o", "--out", metavar="OUT", type=Path, required=True, help="where the table goes")
 
     add("warm", json)
 
-    workbench = add("open", _positional("FILE", "matrix file; the demonstration plant when left out", optional=True), source)
+    workbench = add(
+        "open", _positional("FILE", "matrix file; the demonstration plant when left out", optional=True), source
+    )
     workbench.add_argument("--page", action="store_true", help="a plain page without notebook cells")
     workbench.add_argument("--no-browser", action="store_true", help="only print the address")
 
     demo = add("demo", replace)
-    demo.add_argument("-o", "--out", metavar="FOLDER", type=Path, default=Path("schurbench-demo"), help="new folder for the results")
+    demo.add_argument(
+        "-o", "--out", metavar="FOLDER", type=Path, default=Path("schurbench-demo"), help="new folder for the results"
+    )
     demo.add_argument("-n", metavar="N", type=int, default=None, help="order of the plant, 20 to 1000")
     return parser
 
@@ -136,7 +144,10 @@ def _setting_options() -> argparse.ArgumentParser:
     group = parent.add_argument_group("settings")
     group.add_argument("--strategy", metavar="NAME", help="zero, rayleigh, wilkinson, francis, given or auto")
     group.add_argument(
-        "--shifts", metavar="LIST", type=_shifts, help="for given: shifts such as --shifts=-1.5,2+3j,2-3j (commas between)"
+        "--shifts",
+        metavar="LIST",
+        type=_shifts,
+        help="for given: shifts such as --shifts=-1.5,2+3j,2-3j (commas between)",
     )
     group.add_argument("--form", metavar="FORM", help="real, complex or auto")
     group.add_argument("--balance", metavar="HOW", help="none, permute, scale or both")
@@ -144,7 +155,10 @@ def _setting_options() -> argparse.ArgumentParser:
     group.add_argument("--deflation", metavar="TEST", help="neighbour, ahues-tisseur or norm")
     group.add_argument("--tol", metavar="LEVEL", type=float, help="absolute deflation level in the working units of H")
     group.add_argument(
-        "--exceptional", metavar="SWEEPS", type=int, help="sweeps without deflation before an exceptional shift; 0 for never"
+        "--exceptional",
+        metavar="SWEEPS",
+        type=int,
+        help="sweeps without deflation before an exceptional shift; 0 for never",
     )
     group.add_argument("--limit", metavar="SWEEPS", type=int, help="largest number of sweeps")
     return parent
@@ -166,4 +180,6 @@ def _shifts(text: str) -> list[complex]:
     try:
         return [complex(part.strip().replace("i", "j")) for part in text.split(",")]
     except ValueError:
-        raise argparse.ArgumentTypeError(f"{text!r} is not a list of numbers with commas between, such as -1.5,2+3j") from None
+        raise argparse.ArgumentTypeError(
+            f"{text!r} is not a list of numbers with commas between, such as -1.5,2+3j"
+        ) from None

@@ -1,0 +1,248 @@
+"""One function a command: arguments in, public names called, exit code out."""
+
+from __future__ import annotations
+
+import argparse
+import importlib.util
+from collections.abc import Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from schurbench.cli.console import Console, figure, interruptible
+from schurbench.cli.options import SETTINGS
+from schurbench.errors import InputError, SettingsError
+
+if TYPE_CHECKING:
+    from schurbench.factors import Factors
+    from schurbench.intake import WorkingMatrix
+    from schurbench.journal import Run
+
+__all__ = ["check", "compare", "demo", "explain", "export", "open", "profile", "run", "survey", "twin", "warm"]
+
+DONE, NOT_CONVERGED, INTERRUPTED = 0, 3, 130
+
+#: Largest file of state names read, in bytes: far above any plant, far below the memory.
+LARGEST_LABELS = 16 * 2**20
+
+
+def profile(args: argparse.Namespace, console: Console) -> int:
+    """What kind of matrix FILE holds."""
+    import schurbench as sb
+
+    m = _load(args)
+    p = sb.profile(m)
+    if args.json:
+        console.json(p.to_dict())
+        return DONE
+    _introduce(m, console)
+    for remark in p.remarks:
+        console.say(remark)
+    console.say()
+    console.table(("fact", "value"), [(name, _cell(value)) for name, value in p.to_dict().items() if name != "remarks"])
+    return DONE
+
+
+def run(args: argparse.Namespace, console: Console) -> int:
+    """Iterate on FILE and save the run."""
+    _require_suffix(args.out, (".npz",), "a run is saved as")
+    _require_free([args.out], args.replace, args.file)
+    m = _load(args)
+    result = _iterate(m, args, console, accumulate=not args.no_vectors, stop_when_stalled=args.stop_when_stalled)
+    result.save(args.out)
+    if args.json:
+        console.json(result.to_dict())
+    else:
+        _introduce(m, console)
+        _tell(result, console)
+        console.say(f"Saved to {args.out}.")
+    return _code(result)
+
+
+def explain(args: argparse.Namespace, console: Console) -> int:
+    """Why the iteration on FILE, or in RUN, went as it did."""
+    import schurbench as sb
+
+    if args.html is not None:
+        _require_free([args.html], args.replace, args.file)
+    result = _run_of(args, console)
+    diagnosis = sb.diagnose(result, try_remedies=args.try_remedies)
+    if args.html is not None:
+        _write(args.html, diagnosis.to_html())
+    if args.json:
+        console.json(diagnosis.to_dict())
+    else:
+        _introduce(result.matrix, console)
+        _tell(result, console)
+        console.say()
+        console.say(str(diagnosis))
+        if args.html is not None:
+            console.say(f"\nWritten to {args.html}.")
+    return INTERRUPTED if result.stop.reason == "cancelled" and not _is_run(args.file) else DONE
+
+
+def export(args: argparse.Namespace, console: Console) -> int:
+    """Certified factors of FILE, or of the matrix in RUN."""
+    from schurbench.factors.writers import FORMATS, paths_of
+
+    _require_suffix(args.out, tuple(FORMATS), "factors are saved as")
+    _require_free(paths_of(args.out), args.replace, args.file)
+    result = _run_of(args, console)
+    factors: Factors = result.factors()
+    if args.reorder is not None:
+        factors = factors.reorder(args.reorder)
+    written = factors.save(args.out)
+    certificate = factors.certificate()
+    if args.json:
+        console.json({"files": written, "certificate": certificate.to_dict()})
+    else:
+        _introduce(result.matrix, console)
+        _tell(result, console)
+        console.say(certificate.sentence)
+        console.say(f"Saved {', '.join(str(path) for path in written)}.")
+    return _code(result)
+
+
+def warm(args: argparse.Namespace, console: Console) -> int:
+    """Compile the kernels ahead of the first run."""
+    console.note("Compiling the kernels; this takes up to a minute the first time.")
+    from schurbench import kernels
+
+    seconds = kernels.warm()
+    where = kernels.cache_directory()
+    if args.json:
+        console.json({"seconds": seconds, "cache": where})
+        return DONE
+    console.table(("kernel", "seconds"), list(seconds.items()))
+    if where is None:
+        console.say("No directory could be written for them, so they are compiled again in every process.")
+    else:
+        console.say(f"Kept in {where}.")
+    return DONE
+
+
+def open(args: argparse.Namespace, console: Console) -> int:  # the command's name
+    """JupyterLab with the workbench."""
+    missing = [name for name in ("jupyterlab", "ipywidgets", "bqplot") if importlib.util.find_spec(name) is None]
+    if missing:
+        raise InputError(
+            f"the workbench needs {' and '.join(missing)}; install with pip install 'schurbench[workbench]'"
+        )
+    if args.file is not None:
+        _load(args)  # a file that cannot be used is refused here, not inside a notebook
+    from schurbench.panels import serve
+
+    return int(serve.open_workbench(args.file, key=args.key, page=args.page, browser=not args.no_browser) or DONE)
+
+
+def demo(args: argparse.Namespace, console: Console) -> int:
+    """The whole job on the demonstration plant."""
+    from schurbench.cli.demo import tell
+
+    return tell(args.out, args.n, args.replace, console)
+
+
+def _load(args: argparse.Namespace) -> WorkingMatrix:
+    import schurbench as sb
+
+    labels = _read_labels(args.labels) if getattr(args, "labels", None) is not None else None
+    return sb.load(args.file, key=getattr(args, "key", None), labels=labels)
+
+
+def _read_labels(path: Path) -> list[str]:
+    if not path.is_file():
+        raise InputError(f"{path} with the state names is not a file; give a text file with one name a line")
+    if path.stat().st_size > LARGEST_LABELS:
+        raise InputError(f"{path} with the state names has {path.stat().st_size} bytes; give one short name a line")
+    try:
+        return path.read_text(encoding="utf-8-sig").splitlines()
+    except UnicodeDecodeError:
+        raise InputError(f"{path} with the state names is not UTF-8 text; save it as UTF-8, one name a line") from None
+
+
+def _settings(args: argparse.Namespace) -> dict[str, Any]:
+    """Keywords of `schurbench.iterate` that the user gave."""
+    given = {name: getattr(args, name) for name in SETTINGS if getattr(args, name, None) is not None}
+    if "shifts" in given:
+        given.setdefault("strategy", "given")
+    return given
+
+
+def _is_run(path: Path) -> bool:
+    from schurbench.journal import is_run
+
+    return path.is_file() and is_run(path)
+
+
+def _run_of(args: argparse.Namespace, console: Console) -> Run:
+    """The run saved in FILE|RUN, or a new one on the matrix it holds."""
+    import schurbench as sb
+
+    if not _is_run(args.file):
+        return _iterate(_load(args), args, console)
+    unused = [f"--{name}" for name in ("key", "labels", *SETTINGS) if getattr(args, name, None) is not None]
+    if unused:
+        raise SettingsError(
+            f"{args.file} is a saved run, which {', '.join(unused)} cannot change; run the matrix again"
+        )
+    return sb.open_run(args.file)
+
+
+def _iterate(m: WorkingMatrix, args: argparse.Namespace, console: Console, **further: Any) -> Run:
+    import schurbench as sb
+
+    with interruptible() as cancel:
+        return sb.iterate(m, progress=console.progress(m.n), cancel=cancel, **_settings(args), **further)
+
+
+def _code(result: Run) -> int:
+    if result.stop.reason == "cancelled":
+        return INTERRUPTED
+    return DONE if result.converged else NOT_CONVERGED
+
+
+def _introduce(m: WorkingMatrix, console: Console) -> None:
+    kind = "real" if m.is_real else "complex"
+    console.say(f"{m.name}: {kind}, n = {m.n}, from {m.source}.")
+    for note in m.notes:
+        console.say(note)
+
+
+def _tell(result: Run, console: Console) -> None:
+    from schurbench.prepare.plain import plural
+
+    s = result.settings
+    console.say(
+        f"{plural(result.sweeps, 'sweep')} in {figure(result.seconds)} s with strategy {s.strategy}, {s.form} form, "
+        f"balance {s.balance}, deflation test {s.deflation}. {result.stop.message}"
+    )
+
+
+def _require_free(paths: list[Path], replace: bool, source: Path | None = None) -> None:
+    """Refuse to touch what is already there, before any work is done."""
+    for path in paths:
+        if not path.parent.is_dir():
+            raise InputError(f"{path.parent} is not a folder, so {path.name} cannot be written there; make it first")
+        if path.is_dir():
+            raise InputError(f"{path} is a folder; give the name of a file")
+        if source is not None and path.exists() and source.exists() and path.samefile(source):
+            raise InputError(f"{path} is the input itself; give another name for the output")
+        if path.exists() and not replace:
+            raise InputError(f"{path} already exists; choose another name, or add --replace to overwrite it")
+
+
+def _require_suffix(path: Path, suffixes: tuple[str, ...], what: str) -> None:
+    if path.suffix.lower() not in suffixes:
+        raise InputError(f"{path} does not say its format; {what} {' or '.join(suffixes)}")
+
+
+def _write(path: Path, text: str) -> None:
+    path.write_text(text, encoding="utf-8")
+
+
+def _cell(value: object) -> object:
+    if isinstance(value, Mapping):
+        return ", ".join(f"{name} {figure(item)}" for name, item in value.items())
+    if isinstance(value, list):
+        shown = ", ".join(figure(item) for item in value[:8])
+        return f"{shown}, … ({len(value)} in all)" if len(value) > 8 else shown
+    return value

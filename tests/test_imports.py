@@ -6,7 +6,7 @@ What is enforced, over every import statement in the package wherever it stands 
   that the command line starts the workbench's server through `schurbench.panels.serve`;
 * `kernels` imports nothing of the project but `kernels`: compiled steps know no records and make no decisions;
 * `policy` proposes and never touches H, so of the kernels it may import only those that read (`READING_KERNELS`);
-* one exception runs backwards: `Run.factors()` and its like in the journal import `factors` when called, never at load time.
+* one exception runs backwards: `Run.factors()` imports `schurbench.factors` when called, never at load time.
 """
 
 from __future__ import annotations
@@ -40,7 +40,7 @@ ROOMS = [
 RANK = {room: rank for rank, together in enumerate(ROOMS) for room in together}
 
 #: (importing room, imported module): allowed only inside a function, because the name is needed at call time.
-LATE = {("journal", "schurbench.factors"), ("comparison", "schurbench.factors")}
+LATE = {("journal", "schurbench.factors")}
 
 #: Modules of `kernels` whose functions only read H.
 READING_KERNELS: set[str] = set()

@@ -6,6 +6,7 @@ than argparse is imported before the arguments are known to be right.
 
 from __future__ import annotations
 
+import argparse
 import os
 import sys
 from collections.abc import Sequence
@@ -46,7 +47,7 @@ def main(argv: Sequence[str] | None = None) -> int:
     except SystemExit as stop:  # argparse has printed its line, the help or the version
         return int(stop.code or 0)
     try:
-        code = _carry_out(arguments.command, arguments, console)
+        code = _carry_out(arguments, console)
         console.close()
         return code
     except BrokenPipeError:
@@ -55,11 +56,11 @@ def main(argv: Sequence[str] | None = None) -> int:
         return READER_GONE
 
 
-def _carry_out(command: str, arguments: object, console: Console) -> int:
+def _carry_out(arguments: argparse.Namespace, console: Console) -> int:
     from schurbench.cli import commands
 
     try:
-        return int(getattr(commands, command)(arguments, console))
+        return commands.carry_out(arguments, console)
     except SchurbenchError as error:
         console.fail(str(error))
         return BAD_INPUT

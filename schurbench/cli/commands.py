@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import argparse
 import importlib.util
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -17,12 +17,17 @@ if TYPE_CHECKING:
     from schurbench.intake import WorkingMatrix
     from schurbench.journal import Run
 
-__all__ = ["check", "compare", "demo", "explain", "export", "open", "profile", "run", "survey", "twin", "warm"]
+__all__ = ["carry_out"]
 
 DONE, NOT_CONVERGED, INTERRUPTED = 0, 3, 130
 
 #: Largest file of state names read, in bytes: far above any plant, far below the memory.
 LARGEST_LABELS = 16 * 2**20
+
+
+def carry_out(args: argparse.Namespace, console: Console) -> int:
+    """The command that the arguments name; returns its exit code."""
+    return _COMMANDS[args.command](args, console)
 
 
 def profile(args: argparse.Namespace, console: Console) -> int:
@@ -120,7 +125,7 @@ def warm(args: argparse.Namespace, console: Console) -> int:
     return DONE
 
 
-def open(args: argparse.Namespace, console: Console) -> int:  # the command's name
+def open_workbench(args: argparse.Namespace, console: Console) -> int:
     """JupyterLab with the workbench."""
     missing = [name for name in ("jupyterlab", "ipywidgets", "bqplot") if importlib.util.find_spec(name) is None]
     if missing:
@@ -246,3 +251,14 @@ def _cell(value: object) -> object:
         shown = ", ".join(figure(item) for item in value[:8])
         return f"{shown}, … ({len(value)} in all)" if len(value) > 8 else shown
     return value
+
+
+_COMMANDS: dict[str, Callable[[argparse.Namespace, Console], int]] = {
+    "profile": profile,
+    "run": run,
+    "explain": explain,
+    "export": export,
+    "warm": warm,
+    "open": open_workbench,
+    "demo": demo,
+}

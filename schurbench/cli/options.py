@@ -72,9 +72,7 @@ def build_parser() -> argparse.ArgumentParser:
 
     explain = add("explain", _positional("FILE|RUN", "matrix file or saved run"), source, settings, json, replace)
     explain.add_argument("--html", metavar="OUT", type=Path, help="also write the explanation as one page")
-    explain.add_argument(
-        "--try", dest="try_remedies", action="store_true", help="run each remedy and say what it brought"
-    )
+    explain.add_argument("--try", dest="try_remedies", action="store_true", help="run each remedy and compare")
 
     compare = add("compare", _positional("FILE", "matrix file"), source, settings, json)
     compare.add_argument(
@@ -93,7 +91,7 @@ def build_parser() -> argparse.ArgumentParser:
         metavar="OUT",
         type=Path,
         required=True,
-        help="where the factors go: .mat, .npz, .h5, or .mtx for two files ending in _T and _Z; the manifest stands beside them",
+        help="where the factors go: .mat, .npz, .h5, or .mtx (two files ending in _T and _Z); a manifest stands beside",
     )
     export.add_argument(
         "--reorder",
@@ -105,14 +103,14 @@ def build_parser() -> argparse.ArgumentParser:
     add("twin", _positional("FILE", "matrix file"), source, settings, json)
 
     survey = add(
-        "survey", _positional("SOURCE", "folder with matrix files, or one file with many"), settings, json, replace
+        "survey", _positional("SOURCE", "folder with matrix files, or a file with several"), settings, json, replace
     )
     survey.add_argument("-o", "--out", metavar="OUT", type=Path, required=True, help="where the table goes")
 
     add("warm", json)
 
     workbench = add(
-        "open", _positional("FILE", "matrix file; the demonstration plant when left out", optional=True), source
+        "open", _positional("FILE", "matrix file; without it, the demonstration plant", optional=True), source
     )
     workbench.add_argument("--page", action="store_true", help="a plain page without notebook cells")
     workbench.add_argument("--no-browser", action="store_true", help="only print the address")

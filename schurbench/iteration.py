@@ -1,0 +1,536 @@
+"""The iteration: `Iteration` by hand, `iterate` as the driver and the only loop.
+
+One step is at most one sweep on the active window followed by a scan for negligible entries. The strategy proposes the
+shifts, the deflation test judges the entries, the kernels change H, the journal records; this module only puts them in
+order.
+"""
+
+from __future__ import annotations
+
+import cmath
+import threading
+import time
+from collections.abc import Callable, Sequence
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from schurbench.errors import SchurbenchError, SettingsError
+from schurbench.intake import WorkingMatrix, load
+from schurbench.journal.environment import environment
+from schurbench.journal.journal import Journal
+from schurbench.journal.records import (
+    Deflation,
+    DeflationKind,
+    Progress,
+    Settings,
+    Step,
+    StepKind,
+    Stop,
+    StopReason,
+    Window,
+)
+from schurbench.journal.run import Run
+from schurbench.measures import Array
+from schurbench.policy import (
+    EXCEPTIONAL_PERIOD,
+    Francis,
+    Given,
+    Rayleigh,
+    ShiftStrategy,
+    Wilkinson,
+    WindowView,
+    Zero,
+    deflation_test,
+    exceptional_shifts,
+    strategy_for,
+)
+from schurbench.prepare.preparation import BALANCE_CHOICES, prepare
+
+if TYPE_CHECKING:
+    from pathlib import Path
+
+__all__ = ["Iteration", "iterate"]
+
+#: Sweeps without any deflation after which a run counts as stalled: five times the longest wait seen on healthy
+#: matrices (12 sweeps, double shift, Gaussian matrices of n = 20 to 200).
+STALLED_AFTER = 60
+
+#: Largest single shift accepted, in Frobenius norms of H. No eigenvalue lies beyond one norm, and an explicit step with
+#: shift σ makes rounding errors of size ulp·|σ|, so a larger shift can only spoil the backward error.
+_LARGEST_SHIFT = 4.0
+
+#: Longest interval between two progress calls, seconds; more often would cost more than it tells.
+_PROGRESS_EVERY = 0.05
+
+_BUILT_IN = (Zero, Rayleigh, Wilkinson, Francis)
+
+_KINDS = {
+    (True, 1): StepKind.SINGLE,
+    (True, 2): StepKind.DOUBLE,
+    (False, 1): StepKind.SINGLE,
+    (False, 2): StepKind.TWIN_SINGLE,
+}
+
+
+class Iteration:
+    """A shifted QR iteration that is stepped by hand.
+
+    Parameters
+    ----------
+    matrix : WorkingMatrix, or anything `schurbench.load` accepts
+    strategy, form, balance, flip, deflation, tol, exceptional, accumulate, limit, stop_when_stalled, keep, shifts
+        As for `iterate`.
+
+    Examples
+    --------
+    >>> import numpy as np, schurbench as sb
+    >>> it = sb.Iteration(np.array([[2.0, 1.0, 0.0], [1.0, 3.0, 1.0], [0.0, 1.0, 4.0]]), strategy="wilkinson")
+    >>> while not it.done:
+    ...     step = it.step()
+    >>> it.stop.reason
+    <StopReason.CONVERGED: 'converged'>
+    """
+
+    def __init__(
+        self,
+        matrix: Any,
+        strategy: str | ShiftStrategy = "auto",
+        *,
+        form: str = "auto",
+        balance: str = "permute",
+        flip: bool = False,
+        deflation: str = "ahues-tisseur",
+        tol: float | None = None,
+        exceptional: bool | int | None = None,
+        accumulate: bool = True,
+        limit: int | None = None,
+        stop_when_stalled: bool = False,
+        keep: str | int = "256 MiB",
+        shifts: Sequence[complex] | None = None,
+    ) -> None:
+        self.matrix: WorkingMatrix = load(matrix)
+        self._strategy, self.settings = _resolve(
+            self.matrix, strategy, form, balance, flip, deflation, tol, exceptional, accumulate, limit,
+            stop_when_stalled, keep, shifts,
+        )  # fmt: skip
+        began = time.perf_counter()
+        self.preparation = prepare(self.matrix, self.settings.form, balance, flip, accumulate)
+        self._phases = {"reduce": time.perf_counter() - began, "iterate": 0.0}
+
+        from schurbench.kernels import Workspace, deflate, scan_up, sweep
+
+        self._kernels = (sweep, scan_up, deflate)
+        start = self.preparation
+        self._H: Array = start.H.copy()
+        self._Qh: Array = (
+            np.ascontiguousarray(start.Z.conj().T) if start.Z is not None else np.empty((0, self.n), dtype=start.H.dtype)
+        )
+        self._work = Workspace(self.n, self._H.dtype)
+        self._real = self.settings.form == "real"
+        self._norm = float(np.linalg.norm(self._H))
+        self._test = deflation_test(deflation)
+        self._tol = -1.0 if tol is None else float(tol)
+        self._view = WindowView(self._H)
+        self._trusted = type(self._strategy) in _BUILT_IN
+        self._window: Window = (0, self.n)
+        self._fresh = True  # nothing has been scanned yet
+        self._waited = 0
+        self._sweeps = 0
+        self._stop: Stop | None = None
+        self._journal = Journal(self._H, self._Qh, self._window, self.settings.keep)
+
+    @property
+    def n(self) -> int:
+        """Order of the matrix."""
+        return self.matrix.n
+
+    @property
+    def H(self) -> Array:
+        """Copy of the current H, in working units."""
+        return self._H.copy()
+
+    @property
+    def Z(self) -> Array | None:
+        """Copy of the current Z, or None when it is not accumulated."""
+        return np.ascontiguousarray(self._Qh.conj().T) if self.settings.accumulate else None
+
+    @property
+    def window(self) -> Window:
+        """Active window (lo, hi), half-open; ``(0, n)`` before the first step and ``(0, 0)`` when done."""
+        return self._window
+
+    @property
+    def done(self) -> bool:
+        """Whether the iteration has ended, for whatever reason."""
+        return self._stop is not None
+
+    @property
+    def stop(self) -> Stop | None:
+        """Why the iteration ended, or None while it goes on."""
+        return self._stop
+
+    @property
+    def sweeps(self) -> int:
+        """Sweeps done so far."""
+        return self._sweeps
+
+    @property
+    def waited(self) -> int:
+        """Sweeps since the last deflation."""
+        return self._waited
+
+    def step(self) -> Step:
+        """Do one sweep on the active window and scan it for negligible entries.
+
+        Returns
+        -------
+        Step
+            Its record. The first step also scans before its sweep; when that finishes the matrix, it is a step without
+            a sweep.
+
+        Raises
+        ------
+        SchurbenchError
+            The iteration is done.
+        SettingsError
+            A strategy of the user's own proposed shifts that cannot be used; the state is as before the call.
+        """
+        if self._stop is not None:
+            raise SchurbenchError(f"the iteration is done ({self._stop.message}); start a new one for more steps")
+        try:
+            step = self._step()
+        except BaseException:
+            self._undo()
+            raise
+        if self._window[1] == 0:
+            self._stop = Stop(StopReason.CONVERGED, f"converged after {_count(self._sweeps, 'sweep')}", (0, 0))
+        elif self.settings.stop_when_stalled and self._waited >= STALLED_AFTER:
+            lo, hi = self._window
+            self._stop = Stop(
+                StopReason.STALLED,
+                f"stalled: no deflation in {self._waited} sweeps on rows {lo} to {hi - 1}; see the diagnosis for what to change",
+                self._window,
+            )
+        elif self._sweeps >= self.settings.limit:
+            lo, hi = self._window
+            self._stop = Stop(
+                StopReason.LIMIT,
+                f"stopped at the limit of {_count(self._sweeps, 'sweep')} with rows {lo} to {hi - 1} unfinished",
+                self._window,
+            )
+        return step
+
+    def run(self) -> Run:
+        """Everything done so far as a `Run`; the iteration may go on afterwards."""
+        stop = self._stop or Stop(
+            StopReason.CANCELLED,
+            f"stopped by hand after {_count(self._sweeps, 'sweep')} with {self._window[1]} of {self.n} rows unfinished",
+            self._window,
+        )
+        return Run(
+            matrix=self.matrix,
+            settings=self.settings,
+            preparation=self.preparation,
+            journal=self._journal.snapshot(),
+            stop=stop,
+            phases=dict(self._phases),
+            environment=environment(),
+            _final=(self._H.copy(), self._Qh.copy()),
+        )
+
+    def _step(self) -> Step:
+        began = time.perf_counter()
+        sweep = self._kernels[0]
+        index = len(self._journal.steps) + 1
+        deflations: list[Deflation] = []
+        if self._fresh:
+            self._scan(index, deflations, before=True)
+            self._fresh = False
+        window = self._window
+        shifts: tuple[complex, ...] = ()
+        exceptional = False
+        rotations = 0
+        kind = StepKind.SCAN
+        waited = self._waited
+        if window[1]:
+            shifts, exceptional = self._propose(window)
+            kind = _KINDS[self._real, len(shifts)]
+            rotations = sweep(self._H, self._Qh, self._work, window, shifts)
+            found = len(deflations)
+            self._scan(index, deflations, before=False)
+            self._sweeps += 1
+            waited = 0 if len(deflations) > found else waited + 1
+        self._waited = waited
+        seconds = time.perf_counter() - began
+        self._phases["iterate"] += seconds
+        step = Step(index, window, kind, shifts, exceptional, rotations, seconds, tuple(deflations))
+        self._journal.add(step, self._H, self._Qh, self._window)
+        return step
+
+    def _propose(self, window: Window) -> tuple[tuple[complex, ...], bool]:
+        view = self._view
+        view.window = window
+        view.waited = self._waited
+        view.sweep = self._sweeps
+        period = self.settings.exceptional
+        if period and self._waited and self._waited % period == 0:
+            ordinary = self._strategy.shifts(view)
+            turn = self._waited // period - 1
+            return exceptional_shifts(view, turn, len(ordinary), self._real), True
+        shifts = self._strategy.shifts(view)
+        if not self._trusted:
+            shifts = self._checked(shifts)
+        return tuple([complex(s) for s in shifts]), False
+
+    def _checked(self, shifts: Sequence[complex]) -> Sequence[complex]:
+        """What a strategy of the user's own, or a list of shifts, may propose."""
+        try:
+            values = [complex(s) for s in shifts]
+        except (TypeError, ValueError):
+            raise SettingsError(f"the strategy proposed {shifts!r}; return a sequence of one or two numbers") from None
+        if len(values) not in (1, 2):
+            raise SettingsError(f"the strategy proposed {len(values)} shifts; return one or two")
+        if not all(cmath.isfinite(v) for v in values):
+            raise SettingsError("the strategy proposed a shift that is NaN or infinite; return finite numbers")
+        if self._real and (values[0].imag if len(values) == 1 else abs(values[0].imag + values[1].imag)) != 0.0:
+            raise SettingsError(
+                "the strategy proposed complex shifts that are no conjugate pair; return a pair or use form='complex'"
+            )
+        if self._real and len(values) == 2 and values[0].imag != 0.0 and values[0].real != values[1].real:
+            raise SettingsError("the strategy proposed two complex shifts that are not conjugate; return a conjugate pair")
+        largest = max(abs(v) for v in values)
+        if largest > _LARGEST_SHIFT * self._norm:
+            raise SettingsError(
+                f"a shift of magnitude {largest:.3g} is {largest / self._norm if self._norm else float('inf'):.3g} times the "
+                f"norm of H; no eigenvalue lies beyond 1, so choose shifts within {_LARGEST_SHIFT:g} norms"
+            )
+        return values
+
+    def _scan(self, index: int, out: list[Deflation], *, before: bool) -> None:
+        """Split off whatever is negligible at the bottom of the window, and move the window up."""
+        _, scan_up, deflate = self._kernels
+        H, Qh, name = self._H, self._Qh, self._test.name
+        lo, hi = self._window
+        while hi > 0:
+            row, magnitude, threshold = scan_up(H, lo, hi, self._test.code, self._tol, self._norm)
+            size = hi - row
+            if size == 1 or (size == 2 and self._real):
+                values = deflate(H, Qh, row, size)
+                kind = DeflationKind.SINGLE if size == 1 else DeflationKind.PAIR
+                out.append(Deflation(index, row, size, kind, name, magnitude, threshold, values, before))
+                lo, hi = 0, row
+            else:
+                if magnitude > 0.0:
+                    deflate(H, Qh, row, 0)
+                    out.append(Deflation(index, row, size, DeflationKind.SPLIT, name, magnitude, threshold, (), before))
+                lo = row
+                break
+        self._window = (lo, hi) if hi > 0 else (0, 0)
+
+    def _undo(self) -> None:
+        """Back to the last recorded state after a step was broken off in the middle."""
+        H, Qh = self._journal.rebuild(len(self._journal.steps))
+        self._H[:] = H
+        self._Qh[:] = Qh
+        self._window = self._journal.windows[-1]
+        self._fresh = not self._journal.steps
+
+
+def iterate(
+    matrix: Any,
+    strategy: str | ShiftStrategy = "auto",
+    *,
+    form: str = "auto",
+    balance: str = "permute",
+    flip: bool = False,
+    deflation: str = "ahues-tisseur",
+    tol: float | None = None,
+    exceptional: bool | int | None = None,
+    accumulate: bool = True,
+    limit: int | None = None,
+    stop_when_stalled: bool = False,
+    keep: str | int = "256 MiB",
+    store: str | Path | None = None,
+    progress: Callable[[Progress], object] | None = None,
+    cancel: threading.Event | None = None,
+    shifts: Sequence[complex] | None = None,
+) -> Run:
+    """Run a shifted QR iteration to its end and record every step.
+
+    Parameters
+    ----------
+    matrix : WorkingMatrix, or anything `schurbench.load` accepts
+    strategy : {"auto", "zero", "rayleigh", "wilkinson", "francis", "given"} or ShiftStrategy
+        ``auto`` is francis in real form and wilkinson in complex form.
+    form : {"auto", "real", "complex"}
+        ``auto``: a complex matrix is complex; a real one is real, except for wilkinson and for given shifts that are not
+        closed under conjugation.
+    balance : {"permute", "none", "scale", "both"}
+        What LAPACK ``gebal`` does first.
+    flip : bool
+        Reverse rows and columns first.
+    deflation : {"ahues-tisseur", "neighbour", "norm"}
+    tol : float, optional
+        Absolute level, in working units of H, that replaces rounding level in the deflation test.
+    exceptional : bool or int, optional
+        Exceptional shifts after so many sweeps without a deflation (True: 10; False or 0: never). None: on for all
+        strategies but zero and given.
+    accumulate : bool
+        Whether Z is formed; factors need it.
+    limit : int, optional
+        Largest number of sweeps; 30·max(10, n) by default (Reference-LAPACK dlahqr.f, ITMAX).
+    stop_when_stalled : bool
+        Stop after 60 sweeps without a deflation.
+    keep : str or int
+        Memory for checkpoints, such as ``"256 MiB"`` or a number of bytes.
+    store : None
+        Reserved for runs larger than memory.
+    progress : callable, optional
+        Called with a `Progress` at most 20 times a second, and at the end.
+    cancel : threading.Event, optional
+        When set, the run stops after the current sweep with what it has.
+    shifts : sequence of complex, optional
+        For strategy ``given``.
+
+    Returns
+    -------
+    Run
+        Also when it did not converge: ``run.stop`` says why, and partial factors are available. A keyboard interrupt
+        ends the run the same way, as cancelled.
+
+    Raises
+    ------
+    InputError
+        The matrix cannot be used.
+    SettingsError
+        The settings cannot be carried out on it.
+    """
+    if store is not None:
+        raise SettingsError("store= is not in this version; keep the run in memory and use run.save(path)")
+    began = time.perf_counter()
+    iteration = Iteration(
+        matrix, strategy, form=form, balance=balance, flip=flip, deflation=deflation, tol=tol, exceptional=exceptional,
+        accumulate=accumulate, limit=limit, stop_when_stalled=stop_when_stalled, keep=keep, shifts=shifts,
+    )  # fmt: skip
+    told = began
+    try:
+        while not iteration.done:
+            if cancel is not None and cancel.is_set():
+                break
+            iteration.step()
+            if progress is not None:
+                now = time.perf_counter()
+                if now - told >= _PROGRESS_EVERY:
+                    told = now
+                    progress(_progress(iteration, now - began))
+    except KeyboardInterrupt:
+        pass  # the step was undone; what is left is a valid partial run
+    run = iteration.run()
+    if progress is not None:
+        progress(_progress(iteration, time.perf_counter() - began, ended=True))
+    return run
+
+
+def _progress(iteration: Iteration, seconds: float, *, ended: bool = False) -> Progress:
+    """Estimate from what is done. Work on a window is proportional to its rows times n, so it shrinks quadratically."""
+    n, hi = iteration.n, iteration.window[1]
+    share = 1.0 if iteration.done and hi == 0 else 1.0 - (hi / n) ** 2
+    forecast = seconds * (1.0 - share) / share if share > 0.02 and not ended else None
+    return Progress(
+        phase="done" if ended else "iterate",
+        sweeps=iteration.sweeps,
+        window=iteration.window,
+        deflated=n - hi,
+        share=share,
+        seconds=seconds,
+        forecast=forecast,
+    )
+
+
+def _resolve(
+    matrix: WorkingMatrix,
+    strategy: str | ShiftStrategy,
+    form: str,
+    balance: str,
+    flip: bool,
+    deflation: str,
+    tol: float | None,
+    exceptional: bool | int | None,
+    accumulate: bool,
+    limit: int | None,
+    stop_when_stalled: bool,
+    keep: str | int,
+    shifts: Sequence[complex] | None,
+) -> tuple[ShiftStrategy, Settings]:
+    """Settings as they will be carried out; everything that cannot be is refused here, before any work."""
+    if form not in ("auto", "real", "complex"):
+        raise SettingsError(f"form {form!r} is unknown; choose 'auto', 'real' or 'complex'")
+    if balance not in BALANCE_CHOICES:
+        raise SettingsError(f"balance {balance!r} is unknown; choose one of {', '.join(BALANCE_CHOICES)}")
+    if form == "real" and not matrix.is_real:
+        raise SettingsError("a complex matrix has no real Schur form; use form='complex' or form='auto'")
+    real = matrix.is_real and form != "complex"
+    policy = strategy_for(strategy, real=real, shifts=shifts)
+    if real and form == "auto":
+        real = getattr(policy, "form", "real") == "real"
+    if real and isinstance(policy, Wilkinson) and not np.array_equal(matrix.array, matrix.array.T):
+        raise SettingsError(
+            "wilkinson shifts of a real matrix that is not symmetric may be complex; use form='complex' or strategy 'francis'"
+        )
+    if real and isinstance(policy, Given) and policy.form == "complex":
+        raise SettingsError("the given shifts are not closed under conjugation; add the conjugates or use form='complex'")
+    deflation_test(deflation)
+    if tol is not None and not (isinstance(tol, (int, float)) and 0.0 <= tol < float("inf")):
+        raise SettingsError(f"tol {tol!r} is no level; give a number of at least 0, or None for rounding level")
+    if limit is not None and (isinstance(limit, bool) or not isinstance(limit, (int, np.integer)) or limit < 1):
+        raise SettingsError(f"limit {limit!r} is no number of sweeps; give an integer of at least 1")
+    if exceptional is None:
+        period = EXCEPTIONAL_PERIOD if getattr(policy, "exceptional", True) else 0
+    elif isinstance(exceptional, bool):
+        period = EXCEPTIONAL_PERIOD if exceptional else 0
+    elif isinstance(exceptional, (int, np.integer)) and exceptional >= 0:
+        period = int(exceptional)
+    else:
+        raise SettingsError(f"exceptional {exceptional!r} is unknown; give True, False or a number of sweeps")
+    options: dict[str, Any] = {}
+    if isinstance(policy, Given):
+        options["shifts"] = [[v.real, v.imag] for v in policy.values]
+    if isinstance(policy, Francis) and policy.real_pair != "both":
+        options["real_pair"] = policy.real_pair
+    return policy, Settings(
+        strategy=str(getattr(policy, "name", type(policy).__name__)),
+        form="real" if real else "complex",
+        balance=balance,
+        flip=bool(flip),
+        deflation=deflation,
+        tol=None if tol is None else float(tol),
+        exceptional=period,
+        accumulate=bool(accumulate),
+        limit=30 * max(10, matrix.n) if limit is None else int(limit),
+        stop_when_stalled=bool(stop_when_stalled),
+        keep=_bytes(keep),
+        options=options,
+    )
+
+
+_UNITS = {"b": 1, "kib": 2**10, "mib": 2**20, "gib": 2**30, "kb": 10**3, "mb": 10**6, "gb": 10**9, "": 1}
+
+
+def _bytes(keep: str | int) -> int:
+    if isinstance(keep, (int, np.integer)) and not isinstance(keep, bool) and keep >= 0:
+        return int(keep)
+    if isinstance(keep, str):
+        number = keep.strip().lower().rstrip("kmgib ")
+        unit = keep.strip().lower()[len(number) :].strip()
+        try:
+            amount = float(number) * _UNITS[unit]
+            if 0 <= amount < float("inf"):
+                return int(amount)
+        except (ValueError, KeyError):
+            pass
+    raise SettingsError(f"keep {keep!r} is no amount of memory; write for example '256 MiB'")
+
+
+def _count(number: int, noun: str) -> str:
+    return f"{number} {noun}" if number == 1 else f"{number} {noun}s"

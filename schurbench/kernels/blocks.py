@@ -1,0 +1,166 @@
+"""What happens at the edge of the window: negligible entries found, 2×2 blocks standardised, diagonals copied out."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from schurbench.kernels._jit import compiled
+
+__all__ = ["copy_bands", "scan_up", "standardise_pair"]
+
+ULP = 2.0**-52
+TINY = 2.0**-1022 / ULP  # below this an entry has lost digits to underflow and carries no information
+
+
+@compiled
+def _threshold(H, k, test, tol, norm):
+    """Largest |h[k, k−1]| that the deflation test accepts; test 0 neighbour, 1 ahues-tisseur, 2 norm; tol < 0 for default.
+
+    Neighbour: Wilkinson's |h| ≤ ulp (|h₁₁| + |h₂₂|) (Golub & Van Loan, 4th ed., §7.5.1). Ahues–Tisseur: additionally
+    |h₂₁||h₁₂| ≤ ulp |h₂₂||h₁₁ − h₂₂|, both scaled (Ahues & Tisseur, LAPACK Working Note 122, 1997). Norm: |h| ≤ ulp ‖H‖_F.
+    """
+    n = H.shape[0]
+    if test == 2:
+        return tol if tol >= 0.0 else max(TINY, ULP * norm)
+    h11, h22 = abs(H[k - 1, k - 1]), abs(H[k, k])
+    size = h11 + h22
+    if size == 0.0:
+        # both neighbours vanish: judge by the next subdiagonal entries, then by the norm
+        if k >= 2:
+            size += abs(H[k - 1, k - 2])
+        if k + 1 < n:
+            size += abs(H[k + 1, k])
+        if size == 0.0:
+            size = norm
+    first = tol if tol >= 0.0 else max(TINY, ULP * size)
+    if test == 0:
+        return first
+    eps = first / size if size > 0.0 else ULP
+    low, up = abs(H[k, k - 1]), abs(H[k - 1, k])
+    gap = abs(H[k - 1, k - 1] - H[k, k])
+    big, small = max(low, up), min(low, up)
+    wide, narrow = max(h22, gap), min(h22, gap)
+    total = wide + big
+    if total == 0.0 or up == 0.0:
+        return first
+    allowed = max(TINY, eps * (narrow * (wide / total)))
+    # accepted when small·(big/total) ≤ allowed; solved for |h[k, k−1]| so that magnitude and threshold can be shown
+    second = allowed * (total / up)
+    if small * (big / total) <= allowed:
+        return max(min(first, second), min(first, low))
+    return min(first, second)
+
+
+@compiled
+def scan_up(H, lo, hi, test, tol, norm):
+    """Row of the lowest negligible subdiagonal entry in [lo, hi), looking upward.
+
+    Returns
+    -------
+    row, magnitude, threshold : int, float, float
+        ``row = lo`` when no entry h[k, k−1] with lo < k < hi is negligible.
+    """
+    for k in range(hi - 1, lo, -1):
+        magnitude = abs(H[k, k - 1])
+        if magnitude == 0.0:
+            return k, 0.0, _threshold(H, k, test, tol, norm)
+        threshold = _threshold(H, k, test, tol, norm)
+        if magnitude <= threshold:
+            return k, magnitude, threshold
+    return lo, 0.0, 0.0
+
+
+@compiled
+def standardise_pair(H, Qh, i):
+    """Bring the 2×2 block at rows i, i+1 to standard form by a rotation applied to all of H and Zᴴ.
+
+    Standard form: upper triangular when the eigenvalues are real; otherwise equal diagonal entries and off-diagonal
+    entries of opposite sign (Bai & Demmel, On swapping diagonal blocks in real Schur form, LAA 186, 1993, §2).
+
+    Returns
+    -------
+    re1, im1, re2, im2 : float
+        The eigenvalues.
+    """
+    n = H.shape[0]
+    a, b, c, d = H[i, i], H[i, i + 1], H[i + 1, i], H[i + 1, i + 1]
+    cs, sn = 1.0, 0.0
+    if c == 0.0:
+        pass
+    elif b == 0.0:  # lower triangular: exchange the two rows and columns
+        cs, sn = 0.0, 1.0
+        a, b, c, d = d, -c, 0.0, a
+    elif a == d and (b < 0.0) != (c < 0.0):
+        pass
+    else:
+        p = 0.5 * (a - d)
+        big = max(abs(b), abs(c))
+        mixed = min(abs(b), abs(c)) * math.copysign(1.0, b) * math.copysign(1.0, c)
+        scale = max(abs(p), big)
+        disc = p / scale * p + big / scale * mixed  # ((a−d)/2)² + bc, over scale
+        if disc >= 4.0 * ULP * scale:
+            # clearly real eigenvalues: the row (c, z) of the rotation makes the block triangular
+            z = p + math.copysign(math.sqrt(scale) * math.sqrt(disc), p)
+            r = math.hypot(c, z)
+            cs, sn = z / r, c / r
+            a, d = d + z, d - big / z * mixed
+            b, c = b - c, 0.0
+        else:
+            # complex or nearly equal eigenvalues: make the diagonal entries equal first
+            both = b + c
+            spread = a - d
+            r = math.hypot(both, spread)
+            cs = math.sqrt(0.5 * (1.0 + abs(both) / r))
+            sn = -(p / (r * cs)) * math.copysign(1.0, both)
+            a1, b1 = a * cs + b * sn, -a * sn + b * cs
+            c1, d1 = c * cs + d * sn, -c * sn + d * cs
+            a, b = a1 * cs + c1 * sn, b1 * cs + d1 * sn
+            c, d = -a1 * sn + c1 * cs, -b1 * sn + d1 * cs
+            a = d = 0.5 * (a + d)
+            if c != 0.0:
+                if b == 0.0:
+                    b, c = -c, 0.0
+                    cs, sn = -sn, cs
+                elif (b < 0.0) == (c < 0.0):
+                    # real after all: one more rotation makes the block triangular
+                    rb, rc = math.sqrt(abs(b)), math.sqrt(abs(c))
+                    p = math.copysign(rb * rc, c)
+                    w = 1.0 / math.sqrt(abs(b + c))
+                    a, d = a + p, d - p
+                    b, c = b - c, 0.0
+                    cs1, sn1 = rb * w, rc * w
+                    cs, sn = cs * cs1 - sn * sn1, cs * sn1 + sn * cs1
+    H[i, i], H[i, i + 1], H[i + 1, i], H[i + 1, i + 1] = a, b, c, d
+    if sn != 0.0:
+        for j in range(i + 2, n):
+            x, y = H[i, j], H[i + 1, j]
+            H[i, j] = cs * x + sn * y
+            H[i + 1, j] = cs * y - sn * x
+        for j in range(i):
+            x, y = H[j, i], H[j, i + 1]
+            H[j, i] = cs * x + sn * y
+            H[j, i + 1] = cs * y - sn * x
+        if Qh.shape[0] > 0:
+            for j in range(n):
+                x, y = Qh[i, j], Qh[i + 1, j]
+                Qh[i, j] = cs * x + sn * y
+                Qh[i + 1, j] = cs * y - sn * x
+    if c == 0.0:
+        return a, 0.0, d, 0.0
+    im = math.sqrt(abs(b)) * math.sqrt(abs(c))
+    return a, im, d, -im
+
+
+@compiled
+def copy_bands(H, out):
+    """Copy diagonal, subdiagonal and superdiagonal into rows 0, 1, 2 of ``out`` (3, n); the last two end with 0."""
+    n = H.shape[0]
+    for i in range(n - 1):
+        out[0, i] = H[i, i]
+        out[1, i] = H[i + 1, i]
+        out[2, i] = H[i, i + 1]
+    out[0, n - 1] = H[n - 1, n - 1]
+    out[1, n - 1] = 0.0
+    out[2, n - 1] = 0.0

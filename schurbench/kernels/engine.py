@@ -1,0 +1,52 @@
+"""Carry out what was decided: one sweep by its shifts, one deflation by its row. Shared by the iteration and by replay.
+
+Replay gives the same bytes as the run because both go through these two functions and nothing else changes H.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+
+from schurbench.kernels.blocks import standardise_pair
+from schurbench.kernels.sweeps import double_shift_sweep, single_shift_step
+from schurbench.kernels.workspace import Workspace
+
+__all__ = ["deflate", "sweep"]
+
+
+def sweep(H: np.ndarray, Qh: np.ndarray, work: Workspace, window: tuple[int, int], shifts: Sequence[complex]) -> int:
+    """One sweep on the window; returns the number of rotations (reflectors for a double shift).
+
+    One shift is an explicit single-shift step. Two shifts are an implicit double-shift sweep on a real H and two
+    single-shift steps on a complex one.
+    """
+    lo, hi = window
+    if H.dtype == np.float64:
+        if len(shifts) == 2:
+            first, second = shifts
+            return double_shift_sweep(H, Qh, lo, hi, first.real, first.imag, second.real, second.imag, work.V)
+        return single_shift_step(H, Qh, lo, hi, float(shifts[0].real), work.C, work.S)
+    rotations = 0
+    for shift in shifts:
+        rotations += single_shift_step(H, Qh, lo, hi, complex(shift), work.C, work.S)
+    return rotations
+
+
+def deflate(H: np.ndarray, Qh: np.ndarray, row: int, size: int) -> tuple[complex, ...]:
+    """Set h[row, row−1] to zero; for a split-off block of one or two rows, finish it and return its eigenvalues.
+
+    Parameters
+    ----------
+    row : int
+        First row split off.
+    size : int
+        1 or 2 for a finished block (2 only on a real H); 0 for a split of the window.
+    """
+    if row > 0:
+        H[row, row - 1] = 0.0
+    if size == 2:
+        re1, im1, re2, im2 = standardise_pair(H, Qh, row)
+        return (complex(re1, im1), complex(re2, im2))
+    return (complex(H[row, row]),) if size == 1 else ()

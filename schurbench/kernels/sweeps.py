@@ -1,0 +1,134 @@
+"""One sweep of each kind on an explicit half-open window [lo, hi) of H, with all of H and Zᴴ brought along.
+
+Preconditions of every kernel: H is square, row-major, upper Hessenberg; ``Qh`` (= Zᴴ) is row-major with as many columns,
+or has no rows when Z is not wanted; H[lo, lo−1] = 0 and H[hi, hi−1] = 0 where these entries exist.
+"""
+
+from __future__ import annotations
+
+from schurbench.kernels._jit import compiled
+from schurbench.kernels.rotations import (
+    make_reflector,
+    make_rotation,
+    reflect_right,
+    reflect_rows,
+    rotate_right,
+    rotate_rows,
+)
+
+__all__ = ["double_shift_sweep", "single_shift_step"]
+
+
+@compiled
+def single_shift_step(H, Qh, lo, hi, shift, C, S):
+    """Explicit single-shift QR step: H − σI = QR by rotations from the left, then RQ + σI by the same from the right.
+
+    Golub & Van Loan, Matrix Computations, 4th ed., §7.4.2 (QR step for a Hessenberg matrix) with a shift, §7.5.1.
+
+    Parameters
+    ----------
+    H, Qh : (n, n) arrays, changed in place
+    lo, hi : int
+        Window, hi − lo ≥ 2.
+    shift : scalar of H's type
+    C : (n,) float64 array; S : (n,) array of H's type
+        Receive the rotations lo … hi−2: rows k, k+1 were multiplied by [C_k, S_k; −conj(S_k), C_k].
+
+    Returns
+    -------
+    int
+        Number of rotations, hi − lo − 1.
+    """
+    n = H.shape[0]
+    for i in range(lo, hi):
+        H[i, i] -= shift
+    for k in range(lo, hi - 1):
+        c, s, r = make_rotation(H[k, k], H[k + 1, k])
+        C[k] = c
+        S[k] = s
+        H[k, k] = r
+        H[k + 1, k] = 0.0
+        rotate_rows(H, k, k + 1, n, c, s)
+    rotate_right(H, 0, lo, hi, C, S)
+    for i in range(lo, hi):
+        H[i, i] += shift
+    if Qh.shape[0] > 0:
+        for k in range(lo, hi - 1):
+            rotate_rows(Qh, k, 0, n, C[k], S[k])
+    return hi - lo - 1
+
+
+@compiled
+def double_shift_sweep(H, Qh, lo, hi, re1, im1, re2, im2, V):
+    """Implicit double-shift sweep in real arithmetic: a bulge chased down the window by 3-element reflectors.
+
+    Francis 1961/62; Golub & Van Loan, Matrix Computations, 4th ed., §7.5.4–7.5.5 (Algorithm 7.5.1).
+
+    Parameters
+    ----------
+    H, Qh : (n, n) float64 arrays, changed in place
+    lo, hi : int
+        Window, hi − lo ≥ 3.
+    re1, im1, re2, im2 : float
+        The two shifts: both real, or a conjugate pair (im2 = −im1).
+    V : (n, 3) float64 array
+        Receives the reflectors lo … hi−2 as (t, v₁, v₂).
+
+    Returns
+    -------
+    int
+        Number of reflectors, hi − lo − 1.
+
+    Notes
+    -----
+    When reflector k is known, only rows k+1 … k+3 must have it applied from the right at once, because only they feed
+    later reflectors. All other rows take their reflectors from the right in one pass at the end, along the rows.
+    """
+    n = H.shape[0]
+    # first column of (H − σ₁I)(H − σ₂I), scaled against over- and underflow
+    h11, h12 = H[lo, lo], H[lo, lo + 1]
+    h21, h22, h32 = H[lo + 1, lo], H[lo + 1, lo + 1], H[lo + 2, lo + 1]
+    scale = abs(h11 - re2) + abs(im2) + abs(h21)
+    if scale == 0.0:
+        x0, x1, x2 = 0.0, 0.0, 0.0
+    else:
+        h21s = h21 / scale
+        x0 = h21s * h12 + (h11 - re1) * ((h11 - re2) / scale) - im1 * (im2 / scale)
+        x1 = h21s * (h11 + h22 - re1 - re2)
+        x2 = h21s * h32
+    for k in range(lo, hi - 2):
+        if k > lo:
+            x0, x1, x2 = H[k, k - 1], H[k + 1, k - 1], H[k + 2, k - 1]
+        t, v1, v2, beta = make_reflector(x0, x1, x2)
+        V[k, 0], V[k, 1], V[k, 2] = t, v1, v2
+        if k > lo:
+            H[k, k - 1] = beta
+            H[k + 1, k - 1] = 0.0
+            H[k + 2, k - 1] = 0.0
+        reflect_rows(H, k, k, n, t, v1, v2)
+        for i in range(k + 1, min(k + 4, hi)):
+            w = t * (H[i, k] + v1 * H[i, k + 1] + v2 * H[i, k + 2])
+            H[i, k] -= w
+            H[i, k + 1] -= w * v1
+            H[i, k + 2] -= w * v2
+    k = hi - 2
+    t, v1, v2, beta = make_reflector(H[k, k - 1], H[k + 1, k - 1], 0.0)
+    V[k, 0], V[k, 1], V[k, 2] = t, v1, 0.0
+    H[k, k - 1] = beta
+    H[k + 1, k - 1] = 0.0
+    for j in range(k, n):
+        w = t * (H[k, j] + v1 * H[k + 1, j])
+        H[k, j] -= w
+        H[k + 1, j] -= w * v1
+    w = t * (H[k + 1, k] + v1 * H[k + 1, k + 1])
+    H[k + 1, k] -= w
+    H[k + 1, k + 1] -= w * v1
+    reflect_right(H, lo, hi, V)
+    if Qh.shape[0] > 0:
+        for k in range(lo, hi - 2):
+            reflect_rows(Qh, k, 0, n, V[k, 0], V[k, 1], V[k, 2])
+        for j in range(n):
+            w = t * (Qh[hi - 2, j] + v1 * Qh[hi - 1, j])
+            Qh[hi - 2, j] -= w
+            Qh[hi - 1, j] -= w * v1
+    return hi - lo - 1

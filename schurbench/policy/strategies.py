@@ -1,0 +1,259 @@
+"""Shift strategies: each proposes the shifts of the next sweep from a read-only view of the active window.
+
+A strategy of one's own is any object with a ``shifts(view)`` method that returns one shift (an explicit single-shift
+step) or two (a double-shift sweep), in the working units of H. In real form one shift must be real and two must both be
+real or conjugate. Optional attributes: ``name`` (shown in results), ``form`` (``"real"`` or ``"complex"``, what
+``form="auto"`` means for a real matrix), ``exceptional`` (False to stay pure unless the caller asks otherwise).
+"""
+
+from __future__ import annotations
+
+import cmath
+from collections.abc import Sequence
+from typing import Any, Protocol, runtime_checkable
+
+import numpy as np
+import numpy.typing as npt
+
+from schurbench.errors import SettingsError
+
+__all__ = [
+    "STRATEGIES",
+    "Francis",
+    "Given",
+    "Rayleigh",
+    "ShiftStrategy",
+    "Wilkinson",
+    "WindowView",
+    "Zero",
+    "strategy_for",
+]
+
+Array = npt.NDArray[np.float64] | npt.NDArray[np.complex128]
+
+
+class WindowView:
+    """What a strategy may see.
+
+    Attributes
+    ----------
+    H : (n, n) ndarray
+        Write-protected view of the whole Hessenberg matrix, in working units. Valid only during the call.
+    window : (int, int)
+        Half-open active window; at least two rows.
+    waited : int
+        Sweeps since the last deflation.
+    sweep : int
+        Sweeps done so far in the whole run.
+    """
+
+    __slots__ = ("H", "sweep", "waited", "window")
+
+    def __init__(self, H: Array) -> None:
+        self.H = H.view()
+        self.H.setflags(write=False)
+        self.window = (0, H.shape[0])
+        self.waited = 0
+        self.sweep = 0
+
+    def trailing(self) -> tuple[Any, Any, Any, Any]:
+        """Entries a, b, c, d of the trailing 2×2 block [a b; c d] of the window, as Python numbers."""
+        item, i = self.H.item, self.window[1] - 2
+        return item(i, i), item(i, i + 1), item(i + 1, i), item(i + 1, i + 1)
+
+
+@runtime_checkable
+class ShiftStrategy(Protocol):
+    """What the iteration asks of a shift strategy."""
+
+    def shifts(self, view: WindowView) -> Sequence[complex]:
+        """Propose one or two shifts for the next sweep, in the working units of H."""
+        ...
+
+
+def _nearer_eigenvalue(a: complex, b: complex, c: complex, d: complex) -> complex:
+    """Eigenvalue of [a b; c d] nearer to d, without cancellation (Golub & Van Loan, 4th ed., §8.3.5, made complex)."""
+    product = b * c
+    if product == 0:
+        return d
+    half = (a - d) / 2
+    root = cmath.sqrt(half * half + product)
+    # of ± the one that does not cancel; for a tie, as with a conjugate pair, the upper half-plane by convention
+    plus, minus = half + root, half - root
+    pivot = plus if abs(plus) > abs(minus) or (abs(plus) == abs(minus) and (d - product / plus).imag >= 0) else minus
+    return d - product / pivot if pivot != 0 else d
+
+
+class Zero:
+    """No shift at all: the plain QR iteration, whose rates are ratios of eigenvalue moduli."""
+
+    name = "zero"
+    form = "real"
+    exceptional = False
+
+    def shifts(self, view: WindowView) -> tuple[complex, ...]:
+        """Return (0,)."""
+        return (0.0,)
+
+
+class Rayleigh:
+    """The last diagonal entry of the window: quadratic near a simple eigenvalue, never complex on a real matrix."""
+
+    name = "rayleigh"
+    form = "real"
+    exceptional = True
+
+    def shifts(self, view: WindowView) -> tuple[complex, ...]:
+        """Return the Rayleigh quotient of the last basis vector."""
+        last = view.window[1] - 1
+        return (view.H.item(last, last),)
+
+
+class Wilkinson:
+    """The eigenvalue of the trailing 2×2 block nearer to the last diagonal entry (Wilkinson 1965, ch. 8)."""
+
+    name = "wilkinson"
+    form = "complex"
+    exceptional = True
+
+    def shifts(self, view: WindowView) -> tuple[complex, ...]:
+        """Return one eigenvalue of the trailing 2×2 block."""
+        return (_nearer_eigenvalue(*view.trailing()),)
+
+
+class Francis:
+    """Both eigenvalues of the trailing 2×2 block (Francis 1962): a double shift that keeps real matrices real.
+
+    Parameters
+    ----------
+    real_pair : {"both", "nearer"}
+        What to do when the block has two real eigenvalues: use both, or the one nearer to the last diagonal entry
+        twice, which breaks some periodic orbits (the choice of LAPACK's dlahqr.f).
+    """
+
+    form = "real"
+    exceptional = True
+
+    def __init__(self, real_pair: str = "both") -> None:
+        if real_pair not in ("both", "nearer"):
+            raise SettingsError(f"real_pair {real_pair!r} is unknown; choose 'both' or 'nearer'")
+        self.real_pair = real_pair
+        self.name = "francis" if real_pair == "both" else "francis, nearer real shift twice"
+
+    def shifts(self, view: WindowView) -> tuple[complex, ...]:
+        """Return both eigenvalues of the trailing 2×2 block."""
+        a, b, c, d = view.trailing()
+        near = _nearer_eigenvalue(a, b, c, d)
+        if isinstance(d, float):
+            if near.imag != 0.0:
+                return (near, near.conjugate())
+            near = near.real
+        if self.real_pair == "nearer":
+            return (near, near)
+        far = a + d - near
+        return (near, far)
+
+
+class Given:
+    """A list of shifts, taken in order and then again from its start.
+
+    Parameters
+    ----------
+    values : sequence of complex
+        In the working units of H (those of the matrix, unless it was scaled). In real form a complex shift is used
+        together with its conjugate in one double-shift sweep.
+
+    Raises
+    ------
+    SettingsError
+        Empty list, or values that are not finite numbers.
+    """
+
+    name = "given"
+    exceptional = False
+
+    def __init__(self, values: Sequence[complex]) -> None:
+        try:
+            self.values = tuple(complex(v) for v in values)
+        except (TypeError, ValueError):
+            raise SettingsError("the shifts given are not a list of numbers; pass for example shifts=[1.0, 2.5]") from None
+        if not self.values:
+            raise SettingsError("strategy 'given' needs at least one shift; pass shifts=[...]")
+        if not all(cmath.isfinite(v) for v in self.values):
+            raise SettingsError("a given shift is NaN or infinite; give finite numbers")
+        self.form = "real" if self._closed() else "complex"
+        self._real_sweeps = self._pairs() if self.form == "real" else ()
+
+    def _closed(self) -> bool:
+        left = [v for v in self.values if v.imag != 0.0]
+        for v in list(left):
+            if v in left:
+                left.remove(v)
+                if v.conjugate() not in left:
+                    return False
+                left.remove(v.conjugate())
+        return not left
+
+    def _pairs(self) -> tuple[tuple[complex, ...], ...]:
+        """One entry a sweep in real arithmetic: a real shift alone, a complex one with its conjugate."""
+        sweeps: list[tuple[complex, ...]] = []
+        waiting: list[complex] = []
+        for v in self.values:
+            if v.imag == 0.0:
+                sweeps.append((v.real,))
+            elif v in waiting:
+                waiting.remove(v)
+            else:
+                waiting.append(v.conjugate())
+                sweeps.append((v, v.conjugate()))
+        return tuple(sweeps)
+
+    def shifts(self, view: WindowView) -> tuple[complex, ...]:
+        """Return the next shift of the list; in real form the next real shift or conjugate pair."""
+        if view.H.dtype == np.float64:
+            return self._real_sweeps[view.sweep % len(self._real_sweeps)]
+        return (self.values[view.sweep % len(self.values)],)
+
+
+STRATEGIES = ("auto", "zero", "rayleigh", "wilkinson", "francis", "given")
+
+_SIMPLE: dict[str, type] = {"zero": Zero, "rayleigh": Rayleigh, "wilkinson": Wilkinson, "francis": Francis}
+
+
+def strategy_for(strategy: str | ShiftStrategy, *, real: bool, shifts: Sequence[complex] | None = None) -> ShiftStrategy:
+    """Turn the ``strategy`` keyword into an object.
+
+    Parameters
+    ----------
+    strategy : str or ShiftStrategy
+    real : bool
+        Whether the run will be in real arithmetic where that is possible; ``auto`` chooses francis then, and wilkinson
+        otherwise.
+    shifts : sequence of complex, optional
+        For ``given`` only.
+
+    Raises
+    ------
+    SettingsError
+        Unknown name, missing or superfluous ``shifts``, or an object without a ``shifts`` method.
+    """
+    if strategy == "given":
+        if shifts is None:
+            raise SettingsError("strategy 'given' needs its list of shifts; pass shifts=[...]")
+        return Given(shifts)
+    if shifts is not None:
+        raise SettingsError("shifts are only used by strategy 'given'; name that strategy or leave shifts out")
+    if isinstance(strategy, str):
+        if strategy == "auto":
+            return Francis() if real else Wilkinson()
+        if strategy in _SIMPLE:
+            made: ShiftStrategy = _SIMPLE[strategy]()
+            return made
+        if strategy == "multishift":
+            raise SettingsError("strategy 'multishift' is not in this version; use 'francis' (real) or 'wilkinson' (complex)")
+        raise SettingsError(f"strategy {strategy!r} is unknown; choose one of {', '.join(STRATEGIES)}, or pass an object")
+    if not callable(getattr(strategy, "shifts", None)):
+        raise SettingsError(
+            f"strategy of type {type(strategy).__name__} has no shifts(view) method; see schurbench.policy.ShiftStrategy"
+        )
+    return strategy

@@ -148,6 +148,9 @@ class Francis:
             if near.imag != 0.0:
                 return (near, near.conjugate())
             near = near.real
+        elif view.window[1] - view.window[0] == 2:
+            # both eigenvalues of a 2×2 window make (H − σ₁I)(H − σ₂I) = 0: the second step would undo the first
+            return (near,)
         if self.real_pair == "nearer":
             return (near, near)
         far = a + d - near

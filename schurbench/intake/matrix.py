@@ -29,6 +29,8 @@ class WorkingMatrix:
         What was done on the way in, e.g. widening from float32; each is a sentence.
     file_sha256 : str or None
         SHA-256 of the file's bytes; None when the matrix did not come from a file.
+    key : str or None
+        Name of the array inside the file, for ``.npz`` and ``.mat``: with it the same matrix can be loaded again.
     sha256 : str
         SHA-256 over dtype, shape and the little-endian row-major bytes of the array.
     """
@@ -39,6 +41,7 @@ class WorkingMatrix:
     labels: tuple[str, ...] | None = None
     notes: tuple[str, ...] = ()
     file_sha256: str | None = None
+    key: str | None = None
     sha256: str = field(init=False)
 
     def __post_init__(self) -> None:

@@ -1,7 +1,8 @@
 """Files and arrays become a `WorkingMatrix`; the demonstration plant is built here too.
 
-`load` dispatches, one module reads each family of formats (`numpy_files`, `market`, `matlab`, `text`), and everything they find
-passes the same rules (`checks`, `limits`) on its way in. Readers decide nothing about types, shapes or finiteness.
+`load` dispatches, one module reads each family of formats (`numpy_files`, `market`, `matlab`, `text`), and everything
+they find passes the same rules (`checks`, `limits`) on its way in. Readers decide nothing about types, shapes or
+finiteness.
 """
 
 from __future__ import annotations

@@ -140,13 +140,13 @@ def widen(values: npt.NDArray[Any], what: str) -> tuple[Dense, tuple[str, ...]]:
                 f"{what} holds the integer {worst}, beyond 2**53, where float64 cannot hold every integer; "
                 f"divide it by a power of two or convert it to float64 yourself if rounding is acceptable"
             )
-    target = np.dtype(np.complex128 if kind == "c" else np.float64)
-    wide = values.astype(target, copy=False)
-    if values.dtype.newbyteorder("=") == target:
+    wide: Dense = values.astype(np.complex128, copy=False) if kind == "c" else values.astype(np.float64, copy=False)
+    if values.dtype.newbyteorder("=") == wide.dtype:
         return wide, ()
     sort = {"b": "truth values", "i": "integers", "u": "integers"}.get(kind, "entries")
     return wide, (
-        f"{sort.capitalize()} of type {values.dtype.name} were widened to {target.name}, which holds each of them exactly.",
+        f"{sort.capitalize()} of type {values.dtype.name} were widened to {wide.dtype.name}, which holds each of "
+        "them exactly.",
     )
 
 
@@ -196,7 +196,7 @@ def accept_dense(values: npt.NDArray[Any], what: str, *, owned: bool) -> tuple[D
     require_room(n, is_complex=values.dtype.kind == "c", what=what)
     wide, notes = widen(values, what)
     shared = not owned and np.may_share_memory(wide, values)
-    array = np.array(wide, order="C", copy=True if shared else None, subok=False)
+    array: Dense = np.array(wide, order="C", copy=True if shared else None, subok=False)
     require_finite(array, what)
     return array, notes + _imaginary_note(array)
 
@@ -228,9 +228,7 @@ def accept_sparse(values: Any, what: str) -> tuple[Dense, tuple[str, ...]]:
     dense = sparse.coo_array((data, (triples.row, triples.col)), shape=(n, n)).toarray(order="C")
     require_finite(dense, what)
     if repeated:
-        notes += (
-            f"{repeated} repeated coordinate{'s were' if repeated > 1 else ' was'} added to the first of {'their' if repeated > 1 else 'its'} kind.",
-        )
+        notes += (f"Entries stored more than once ({repeated} in all) were added together.",)
     notes += (f"The sparse matrix with {int(values.nnz)} stored entries was expanded to a dense one.",)
     return dense, notes + _imaginary_note(dense)
 
@@ -238,6 +236,7 @@ def accept_sparse(values: Any, what: str) -> tuple[Dense, tuple[str, ...]]:
 def _imaginary_note(array: Dense) -> tuple[str, ...]:
     if array.dtype.kind == "c" and not array.imag.any():
         return (
-            "Every imaginary part is zero; the matrix stays complex because its type is. Give the real part to work in real arithmetic.",
+            "Every imaginary part is zero; the matrix stays complex because its type is. Give the real part "
+            "to work in real arithmetic.",
         )
     return ()

@@ -32,7 +32,7 @@ _STATES = (
 
 @dataclass(frozen=True, slots=True)
 class CanalReach:
-    """One reach with its gate and controller. The values are typical of a small branch canal, and invented for this demonstration.
+    """One reach with its gate and controller; the values are typical of a small branch canal, and invented.
 
     Attributes
     ----------
@@ -99,12 +99,13 @@ class CanalReach:
 
 
 DEMO_STORY = (
-    "A branch canal feeds a chain of identical reaches. Each reach is kept at level by the gate at its end, which a local "
-    "controller opens when the water stands too high: a disturbance runs from gate to gate down the canal. Levels are in mm, flows in "
-    "m³/s, openings in %, controller sums in mm·s, supply bookings in m³/h, and time in hours, as such models are kept in practice. That "
-    "makes three difficulties by itself: mixed units scale rows and columns badly, identical reaches in a row repeat every eigenvalue "
-    "without giving it new eigenvectors, and one-way flow of cause leaves the matrix in blocks that the ordering of the states hides. "
-    "The values are typical and invented; do not judge a real canal's stability by them."
+    "A branch canal feeds a chain of identical reaches. Each reach is kept at level by the gate at its end, which a "
+    "local controller opens when the water stands too high: a disturbance runs from gate to gate down the canal. "
+    "Levels are in mm, flows in m³/s, openings in %, controller sums in mm·s, supply bookings in m³/h, and time in "
+    "hours, as such models are kept in practice. That makes three difficulties by itself: mixed units scale rows "
+    "and columns badly, identical reaches in a row repeat every eigenvalue without giving it new eigenvectors, and "
+    "one-way flow of cause leaves the matrix in blocks that the ordering of the states hides. The values are "
+    "typical and invented; do not judge a real canal's stability by them."
 )
 
 
@@ -114,11 +115,11 @@ def demo_matrix(n: int = 83, *, gates: str = "free", reach: CanalReach | None = 
     Parameters
     ----------
     n : int
-        Number of states, 20 to 1000. Every reach takes `STATES_PER_REACH` = 8; what is left over, three to ten states, are
-        sections of the supply channel. The default gives ten reaches and three sections.
+        Number of states, 20 to 1000. Every reach takes `STATES_PER_REACH` = 8; what is left over, three to ten
+        states, are sections of the supply channel. The default gives ten reaches and three sections.
     gates : {"free", "submerged"}
-        Free flow under the gates depends on the level above them only, so that causes travel one way, downstream. Submerged
-        gates also feel the level below, which couples neighbours both ways.
+        Free flow under the gates depends on the level above them only, so that causes travel one way, downstream.
+        Submerged gates also feel the level below, which couples neighbours both ways.
     reach : CanalReach, optional
         Physical values, the same for every reach.
 
@@ -134,31 +135,34 @@ def demo_matrix(n: int = 83, *, gates: str = "free", reach: CanalReach | None = 
 
     Notes
     -----
-    *Water.* The Saint-Venant equations of a rectangular channel are linearised about uniform flow (velocity V, wave celerity
-    c = √(g·depth), width B, slope S, Manning friction):
+    *Water.* The Saint-Venant equations of a rectangular channel are linearised about uniform flow (velocity V, wave
+    celerity c = √(g·depth), width B, slope S, Manning friction):
 
         B ∂h/∂t + ∂q/∂x = 0
         ∂q/∂t + 2V ∂q/∂x + (c² − V²) B ∂h/∂x + (2gS/V) q − g B S (1 + κ) h = 0,    κ = 7/3 − (4/3) (A/B) P'/P
 
-    with section A, wetted perimeter P and P' = dP/d(depth); these are the equations of Litrico and Fromion, Modeling and Control of
-    Hydrosystems, Springer 2009 (from memory; derived anew here). A staggered grid of three levels and two flows, with central
-    differences, carries them; the gates at both ends give the boundary flows. *Gates* follow Q ∝ opening · √head, linearised; a
-    motor drives them with a first-order lag. *Control* is proportional and integral on the level at the reach's lower end, measured in a
-    stilling well (a lag): local upstream control. *Supply* is a row of linear reservoirs above the first reach.
+    with section A, wetted perimeter P and P' = dP/d(depth); these are the equations of Litrico and Fromion, Modeling
+    and Control of Hydrosystems, Springer 2009 (from memory; derived anew here). A staggered grid of three levels and
+    two flows, with central differences, carries them; the gates at both ends give the boundary flows. *Gates* follow
+    Q ∝ opening · √head, linearised; a motor drives them with a first-order lag. *Control* is proportional and
+    integral on the level at the reach's lower end, measured in a stilling well (a lag): local upstream control.
+    *Supply* is a row of linear reservoirs above the first reach.
 
-    With free gates A is block lower triangular, and its exact eigenvalues are the eight of one reach, each as many times as there are
-    reaches, and −3600/supply_lag for the supply sections. All of them lie in the left half-plane. What it does to an algorithm,
-    measured with LAPACK through scipy 1.17 (n = 20, 83, 300, 1000; free gates):
+    With free gates A is block lower triangular, and its exact eigenvalues are the eight of one reach, each as many
+    times as there are reaches, and −3600/supply_lag for the supply sections. All of them lie in the left half-plane.
+    What it does to an algorithm, measured with LAPACK through scipy 1.17 (n = 20, 83, 300, 1000; free gates):
 
     - Balancing shrinks the Frobenius norm 54 to 55-fold (submerged: 57, 63, 65, 66-fold).
-    - Departure from normality (Henrici), relative to the norm: 0.9999; after balancing still 0.82 (submerged: 0.70 to 0.77).
-    - Every eigenvalue is defective, in chains as long as the canal. Computed eigenvalues are off by up to 2·10⁻⁶, 0.3, 5 and 15 per
-      hour, although each backward error is of rounding size; median condition number after balancing 2·10⁸ at n = 20 and above 10¹²
-      from n = 83 (submerged: 18, 35, 5·10³, 4·10¹¹).
+    - Departure from normality (Henrici), relative to the norm: 0.9999; after balancing still 0.82 (submerged: 0.70 to
+      0.77).
+    - Every eigenvalue is defective, in chains as long as the canal. Computed eigenvalues are off by up to 2·10⁻⁶,
+      0.3, 5 and 15 per hour, although each backward error is of rounding size; median condition number after
+      balancing 2·10⁸ at n = 20 and above 10¹² from n = 83 (submerged: 18, 35, 5·10³, 4·10¹¹).
     - The slowest mode decays with 1.089 per hour at every n; LAPACK reports 1.089, 1.07, 0.986 and 0.4.
 
-    .. caution:: The last point is why this plant is here: a stability margin read off computed eigenvalues can be far from the truth
-       when they are ill-conditioned. Judge the safety of a real plant with licensed engineering practice, never by this model.
+    .. caution:: The last point is why this plant is here: a stability margin read off computed eigenvalues can be far
+       from the truth when they are ill-conditioned. Judge the safety of a real plant with licensed engineering
+       practice, never by this model.
     """
     if isinstance(n, bool) or not isinstance(n, int | np.integer) or not _SMALLEST <= n <= _LARGEST:
         raise SettingsError(f"the canal has {_SMALLEST} to {_LARGEST} states; n was {n!r}")
@@ -199,10 +203,10 @@ def _fill_reach(
     head: float,
     reach: CanalReach,
 ) -> npt.NDArray[np.float64]:
-    """Write the rows of one reach; return its outflow in m³/s as a row over all states, which is the inflow of the next."""
+    """Write the rows of one reach; return its outflow in m³/s as a row over all states: the inflow of the next."""
     unit = np.eye(a.shape[0])[first : first + STATES_PER_REACH]
     levels, (well, total, opening) = 1e-3 * unit[0:3], unit[5:8]  # levels in m here, as the equations want them
-    outflow = reach.flow / reach.opening * opening + reach.flow / (2 * head) * levels[2]
+    outflow: npt.NDArray[np.float64] = reach.flow / reach.opening * opening + reach.flow / (2 * head) * levels[2]
     if below is not None:
         outflow[below] -= reach.flow / (2 * head) * 1e-3
     flows = [inflow, unit[3], unit[4], outflow]

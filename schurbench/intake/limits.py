@@ -10,7 +10,8 @@ from schurbench.errors import InputError
 __all__ = ["available_bytes", "readable_size", "require_memory", "require_room", "run_bytes"]
 
 ARRAYS_IN_A_RUN = 6
-"""Dense n × n arrays alive at the peak of a run: the matrix, its scaled copy, the Hessenberg start with its Z, the working H and Z."""
+"""Dense n × n arrays alive at the peak of a run: the matrix, the Hessenberg start with its Z, the working H and Z, and
+LAPACK's workspace."""
 
 ASSUMED_BYTES = 4 * 2**30
 """Taken as the memory of a machine that does not tell: small enough to be safe on a present-day laptop."""
@@ -41,8 +42,7 @@ def available_bytes() -> int | None:
     """
     candidates = [value for value in (_from_meminfo(), _from_control_group()) if value is not None]
     if not candidates:
-        physical = _from_sysconf()
-        return physical
+        return _from_sysconf()
     return min(candidates)
 
 
@@ -59,8 +59,9 @@ def require_room(n: int, *, is_complex: bool, what: str) -> None:
     if need > (ASSUMED_BYTES if room is None else room):
         dense = n * n * (16 if is_complex else 8)
         raise InputError(
-            f"{what} is {n} × {n}: {readable_size(dense)} as a dense {'complex' if is_complex else 'real'} matrix and about "
-            f"{readable_size(need)} for a run, but {_room_text(room)}; use a smaller model or a machine with more memory"
+            f"{what} is {n} × {n}: {readable_size(dense)} as a dense {'complex' if is_complex else 'real'} matrix and "
+            f"about {readable_size(need)} for a run, but {_room_text(room)}; use a smaller model or a machine with "
+            f"more memory"
         )
 
 

@@ -38,9 +38,9 @@ def load(
     ----------
     source : path or object
         A path to ``.npy``, ``.npz``, Matrix Market (``.mtx``, ``.mtx.gz``), MATLAB ``.mat`` (7.3 needs h5py) or text
-        (``.csv``, ``.tsv``, ``.txt``); a NumPy array or nested lists; a scipy sparse matrix; a pandas frame; an object with a
-        square ``.A``, such as a state-space model; or a `WorkingMatrix`, which is returned as it is unless labels or a name are
-        given.
+        (``.csv``, ``.tsv``, ``.txt``); a NumPy array or nested lists; a scipy sparse matrix; a pandas frame; an
+        object with a square ``.A``, such as a state-space model; or a `WorkingMatrix`, which is returned as it is
+        unless labels or a name are given.
     key : str, optional
         Name of the array in a ``.npz`` or ``.mat`` file. Without it the only array, or the only square one, is taken.
     labels : sequence of n str, or path, optional
@@ -51,18 +51,19 @@ def load(
     Returns
     -------
     WorkingMatrix
-        With a write-protected copy of shape (n, n), float64 or complex128. Its `notes` say what was changed or chosen on the way.
+        With a write-protected copy of shape (n, n), float64 or complex128. Its `notes` say what was changed or chosen
+        on the way.
 
     Raises
     ------
     InputError
-        One line on what was found and what to do: not square, empty, not finite, not numbers, pickled, truncated, of unknown
-        format, too large for the memory, or not held exactly by float64.
+        One line on what was found and what to do: not square, empty, not finite, not numbers, pickled, truncated, of
+        unknown format, too large for the memory, or not held exactly by float64.
 
     Notes
     -----
-    Nothing is rounded: booleans, integers up to 2**53 in magnitude and shorter floats are widened, longer ones refused. No data file
-    runs code: nothing is unpickled or evaluated, and links to other files are not followed.
+    Nothing is rounded: booleans, integers up to 2**53 in magnitude and shorter floats are widened, longer ones
+    refused. No data file runs code: nothing is unpickled or evaluated, and links to other files are not followed.
     """
     if key is not None and not isinstance(key, str):
         raise InputError(f"key is a {type(key).__name__}, not the name of an array; give a string")
@@ -182,7 +183,8 @@ def _read_object(source: Any) -> tuple[Found, str]:
                 f"{kind} cannot be turned into an array ({one_line(error)}); give a NumPy array"
             ) from error
     raise InputError(
-        f"a {one_line(type(source).__name__)} is not a matrix; give a path, an array, a sparse matrix, a data frame or an object with .A"
+        f"a {one_line(type(source).__name__)} is not a matrix; give a path, an array, a sparse matrix, a data "
+        "frame or an object with .A"
     )
 
 
@@ -199,7 +201,8 @@ def _from_lists(source: Sequence[Any]) -> Any:
             for value in row:
                 if isinstance(value, int | np.integer) and abs(int(value)) > EXACT_INTEGER:
                     raise InputError(
-                        f"list holds the integer {value}, beyond 2**53, where float64 cannot hold every integer; write it as a float "
+                        f"list holds the integer {value}, beyond 2**53, where float64 cannot hold every "
+                        "integer; write it as a float "
                         f"if rounding is acceptable"
                     )
     return values
@@ -213,7 +216,8 @@ def _from_frame(frame: Any, pandas: Any) -> Found:
         if missing.any():
             row = int(missing.argmax())
             raise InputError(
-                f"data frame has a missing value at row {row}, column {place}, counted from 0; every entry must be a finite number"
+                f"data frame has a missing value at row {row}, column {place}, counted from 0; every entry "
+                "must be a finite number"
             )
         # pandas' own nullable types keep their numbers under a NumPy type of the same width.
         values = column.to_numpy(dtype=getattr(dtype, "numpy_dtype", None))
@@ -227,7 +231,8 @@ def _from_frame(frame: Any, pandas: Any) -> Found:
             and max(abs(int(values.min())), abs(int(values.max()))) > EXACT_INTEGER
         ):
             raise InputError(
-                f"data frame column {one_line(repr(label))} holds integers beyond 2**53, which float64 cannot hold exactly; "
+                f"data frame column {one_line(repr(label))} holds integers beyond 2**53, which float64 cannot "
+                "hold exactly; "
                 f"convert it yourself if rounding is acceptable"
             )
         columns.append(values)
@@ -274,7 +279,8 @@ def _is_identity(mass: Any, n: int) -> bool:
     from scipy import sparse
 
     if sparse.issparse(mass):
-        return mass.shape == (n, n) and (mass != sparse.eye_array(n, format="csr")).nnz == 0
+        triples: Any = mass
+        return bool(triples.shape == (n, n) and (triples != sparse.eye_array(n, format="csr")).nnz == 0)
     try:
         array = np.array(mass)
         if array.size == 0:
@@ -305,6 +311,7 @@ def _given_labels(labels: Sequence[str] | str | os.PathLike[str], n: int) -> tup
     for place, entry in enumerate(entries):
         if not isinstance(entry, str) or not entry.strip() or not entry.isprintable():
             raise InputError(
-                f"label {place} (counted from 0) is {one_line(repr(entry))[:60]}; every label is one line of printable text"
+                f"label {place} (counted from 0) is {one_line(repr(entry))[:60]}; every label is one line of "
+                "printable text"
             )
     return tuple(str(entry).strip() for entry in entries)

@@ -8,7 +8,7 @@ from __future__ import annotations
 import gzip
 from dataclasses import dataclass
 from pathlib import Path
-from typing import IO
+from typing import IO, cast
 
 from schurbench.errors import InputError
 from schurbench.intake.checks import Found, one_line, require_square
@@ -35,7 +35,8 @@ class _Header:
 def read_market(path: Path, what: str) -> Found:
     """The matrix of a ``.mtx`` or ``.mtx.gz`` file.
 
-    The size line is checked before the entries are read: a few bytes of coordinates can announce a dense matrix of any size.
+    The size line is checked before the entries are read: a few bytes of coordinates can announce a dense matrix of
+    any size.
 
     Raises
     ------
@@ -45,7 +46,7 @@ def read_market(path: Path, what: str) -> Found:
 
     zipped = path.suffix.lower() == ".gz"
     try:
-        with gzip.open(path, "rb") if zipped else path.open("rb") as stream:
+        with cast("IO[bytes]", gzip.open(path, "rb") if zipped else path.open("rb")) as stream:
             header = _read_header(stream, what)
             n = require_square((header.rows, header.columns), what)
             require_room(n, is_complex=header.field == "complex", what=what)
@@ -83,7 +84,8 @@ def _read_header(stream: IO[bytes], what: str) -> _Header:
     banner = next_line().lower().split()
     if len(banner) != 5 or banner[0] != "%%matrixmarket" or banner[1] != "matrix":
         raise InputError(
-            f"{what} does not start as a Matrix Market file (%%MatrixMarket matrix, then layout, field and symmetry); check the file"
+            f"{what} does not start as a Matrix Market file (%%MatrixMarket matrix, then layout, field and "
+            "symmetry); check the file"
         )
     layout, field, symmetry = banner[2:]
     line = next_line()

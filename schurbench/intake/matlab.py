@@ -149,7 +149,7 @@ def _hdf5_candidate(h5py: Any, file: Any, name: str) -> Candidate:
         columns = int(node["jc"].shape[0]) - 1 if "jc" in parts else 0
         return Candidate(name, (int(node.attrs["MATLAB_sparse"]), columns))
     shape = tuple(int(length) for length in (node.shape or ()))[::-1]
-    if "MATLAB_empty" in node.attrs and node.attrs["MATLAB_empty"]:
+    if node.attrs.get("MATLAB_empty"):
         # An empty variable is stored as the list of its dimensions.
         return Candidate(name, tuple(int(length) for length in node[()]) if node.size <= 32 else ())
     if sort and sort not in _NUMBERS:

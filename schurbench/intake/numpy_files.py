@@ -1,4 +1,4 @@
-"""NumPy's own files: ``.npy`` and ``.npz``, and sparse matrices that scipy wrote into ``.npz``. Nothing is ever unpickled."""
+"""NumPy's ``.npy`` and ``.npz`` files, and sparse matrices that scipy wrote into ``.npz``. Nothing is unpickled."""
 
 from __future__ import annotations
 
@@ -94,7 +94,8 @@ def _read_header(stream: IO[bytes], what: str) -> _Header:
         else:
             # Version 3 exists only for structured types with non-Latin field names, which are refused anyway.
             raise InputError(
-                f"{what} has format version {version[0]}.{version[1]}, which is for structured types; save plain numbers"
+                f"{what} has format version {version[0]}.{version[1]}, which is for structured types; save "
+                "plain numbers"
             )
     except InputError:
         raise
@@ -122,7 +123,8 @@ def _check_header(header: _Header, size: int, what: str) -> None:
     if size != header.expected_bytes:
         state = "truncated" if size < header.expected_bytes else "damaged"
         raise InputError(
-            f"{what} is {state}: its header announces {header.expected_bytes} bytes and there are {size}; write it again"
+            f"{what} is {state}: its header announces {header.expected_bytes} bytes and there are {size}; "
+            "write it again"
         )
 
 

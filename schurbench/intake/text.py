@@ -29,9 +29,10 @@ _COMMENTS = ("#", "%")
 def read_text(path: Path, what: str) -> Found:
     """The matrix of a ``.csv``, ``.tsv`` or ``.txt`` file.
 
-    The separator is taken from the first line: semicolon, else tab, else comma, else blanks. A first row or first column that
-    is not made of numbers gives the state names; where both are there, they must agree to be kept. Complex numbers are
-    written ``1+2i`` or ``1+2j``, with or without brackets. Lines that start with ``#`` or ``%`` are comments.
+    The separator is taken from the first line: semicolon, else tab, else comma, else blanks. A first row or first
+    column that is not made of numbers gives the state names; where both are there, they must agree to be kept.
+    Complex numbers are written ``1+2i`` or ``1+2j``, with or without brackets. Lines that start with ``#`` or ``%``
+    are comments.
 
     Raises
     ------
@@ -116,7 +117,8 @@ def _parse(path: Path, what: str) -> Found:
             row.pop()
         if len(row) != fields:
             raise InputError(
-                f"{what} has {len(row)} fields at line {number} where the first row has {fields}; it may be truncated, write it again"
+                f"{what} has {len(row)} fields at line {number} where the first row has {fields}; it may be "
+                "truncated, write it again"
             )
         if indexed:
             names.append(row[0])
@@ -146,7 +148,7 @@ def _is_number(field: str) -> bool:
 
 
 def _is_header(row: list[str], after: list[str] | None) -> bool:
-    """Whether the first row holds names: anything but a number after its first field, or an empty corner over numbers."""
+    """Whether the first row holds names: no number after its first field, or an empty corner over numbers."""
     if len(row) == 1:
         return not _is_number(row[0]) and after is not None
     if after is not None and len(after) == len(row) + 1:
@@ -221,7 +223,8 @@ def _number(field: str, column: int, line: int, what: str) -> float | complex:
             "write numbers with a decimal point" if "," in field and _NUMBER_LIKE.fullmatch(field) else "correct it"
         )
         raise InputError(
-            f"{what} has {one_line(repr(field[:40]))} at line {line}, field {column + 1} of the numbers, which is not a number; {advice}"
+            f"{what} has {one_line(repr(field[:40]))} at line {line}, field {column + 1} of the numbers, "
+            f"which is not a number; {advice}"
         )
     if match["only"] is not None:
         return complex(0.0, _float(match["only"]))
@@ -237,6 +240,7 @@ def _float(text: str) -> float:
 def _check_integer(field: str, line: int, what: str) -> None:
     if abs(int(field)) > EXACT_INTEGER:
         raise InputError(
-            f"{what} holds the integer {field[:30]} at line {line}, beyond 2**53, where float64 cannot hold every integer; "
+            f"{what} holds the integer {field[:30]} at line {line}, beyond 2**53, where float64 cannot hold "
+            "every integer; "
             f"write it with a decimal point if rounding is acceptable"
         )

@@ -31,7 +31,7 @@ from schurbench.journal.records import (
     Window,
 )
 from schurbench.journal.run import Run
-from schurbench.measures import Array
+from schurbench.measures import Array, frobenius
 from schurbench.policy import (
     EXCEPTIONAL_PERIOD,
     Francis,
@@ -128,7 +128,7 @@ class Iteration:
         )
         self._work = Workspace(self.n, self._H.dtype)
         self._real = self.settings.form == "real"
-        self._norm = float(np.linalg.norm(self._H))
+        self._norm = frobenius(self._H)
         self._test = deflation_test(deflation)
         self._tol = -1.0 if tol is None else float(tol)
         self._view = WindowView(self._H)

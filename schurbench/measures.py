@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["RATIO_LIMIT", "ULP", "norm1", "orthogonality_ratio", "power_of_two_exponent", "residual_ratio"]
+__all__ = ["RATIO_LIMIT", "ULP", "frobenius", "norm1", "orthogonality_ratio", "power_of_two_exponent", "residual_ratio"]
 
 #: Unit in the last place of 1.0 in double precision, LAPACK's ``ulp``.
 ULP = 2.0**-52
@@ -26,6 +26,15 @@ Array = npt.NDArray[np.float64] | npt.NDArray[np.complex128]
 def norm1(a: Array) -> float:
     """Largest absolute column sum; 0 for an empty array."""
     return float(np.abs(a).sum(axis=0).max()) if a.size else 0.0
+
+
+def frobenius(a: Array) -> float:
+    """Frobenius norm of an array in working units (largest entry at most 2^450, so squares cannot overflow).
+
+    Summed without BLAS: a threaded dot product costs milliseconds of waking up and its last bit depends on the threads.
+    """
+    parts = np.ascontiguousarray(a).view(np.float64)
+    return float(np.sqrt(np.square(parts).sum()))
 
 
 def power_of_two_exponent(a: Array) -> int:

@@ -32,7 +32,10 @@ class Journal:
     """
 
     def __init__(self, H: Array, Qh: Array, window: Window, keep: int) -> None:
+        from schurbench.kernels import copy_bands  # not before a run begins
+
         n = H.shape[0]
+        self._copy_bands = copy_bands
         self.n = n
         self.keep = keep
         self.steps: list[Step] = []
@@ -57,14 +60,12 @@ class Journal:
             self._checkpoint(index, H, Qh)
 
     def _keep_bands(self, H: Array) -> None:
-        from schurbench.kernels import copy_bands
-
         slot = self._banded % _CHUNK
         if slot == 0:
             if self._chunks and len(self._chunks) * _CHUNK * self._band_bytes >= self.keep:
                 return  # later bands are rebuilt by replay when someone asks
             self._chunks.append(np.empty((_CHUNK, 3, self.n), dtype=H.dtype))
-        copy_bands(H, self._chunks[-1][slot])
+        self._copy_bands(H, self._chunks[-1][slot])
         self._banded += 1
 
     def _checkpoint(self, index: int, H: Array, Qh: Array) -> None:
@@ -80,11 +81,9 @@ class Journal:
         """Diagonal, subdiagonal and superdiagonal of H after step k, shape (3, n); the last two end with 0."""
         if k < self._banded:
             return self._chunks[k // _CHUNK][k % _CHUNK]
-        from schurbench.kernels import copy_bands
-
         H, _ = self.rebuild(k)
         out = np.empty((3, self.n), dtype=H.dtype)
-        copy_bands(H, out)
+        self._copy_bands(H, out)
         return out
 
     def rebuild(self, k: int) -> tuple[Array, Array]:

@@ -16,7 +16,7 @@ from schurbench.intake import WorkingMatrix
 from schurbench.journal.journal import Journal
 from schurbench.journal.records import Deflation, Rotation, Settings, State, Step, Stop, StopReason, Window
 from schurbench.journal.rotations import Rotations
-from schurbench.measures import Array
+from schurbench.measures import Array, frobenius
 from schurbench.prepare.preparation import Preparation
 
 if TYPE_CHECKING:
@@ -105,7 +105,7 @@ class Run:
     @cached_property
     def norm(self) -> float:
         """Frobenius norm of H in working units; no step changes it beyond rounding."""
-        return float(np.linalg.norm(self.preparation.H))
+        return frobenius(self.preparation.H)
 
     def subdiagonal(self, k: int) -> npt.NDArray[np.float64]:
         """Magnitudes |h[i+1, i]| after step k, shape (n−1,); k = 0 is the Hessenberg start."""

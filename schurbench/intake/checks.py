@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, cast
 
 import numpy as np
 import numpy.typing as npt
@@ -140,7 +140,12 @@ def widen(values: npt.NDArray[Any], what: str) -> tuple[Dense, tuple[str, ...]]:
                 f"{what} holds the integer {worst}, beyond 2**53, where float64 cannot hold every integer; "
                 f"divide it by a power of two or convert it to float64 yourself if rounding is acceptable"
             )
-    wide: Dense = values.astype(np.complex128, copy=False) if kind == "c" else values.astype(np.float64, copy=False)
+    # The view turns an explicit byte order that happens to be the machine's into the type every later room compares with.
+    wide: Dense = (
+        values.astype(np.complex128, copy=False).view(np.complex128)
+        if kind == "c"
+        else values.astype(np.float64, copy=False).view(np.float64)
+    )
     if values.dtype.newbyteorder("=") == wide.dtype:
         return wide, ()
     sort = {"b": "truth values", "i": "integers", "u": "integers"}.get(kind, "entries")
@@ -196,7 +201,7 @@ def accept_dense(values: npt.NDArray[Any], what: str, *, owned: bool) -> tuple[D
     require_room(n, is_complex=values.dtype.kind == "c", what=what)
     wide, notes = widen(values, what)
     shared = not owned and np.may_share_memory(wide, values)
-    array: Dense = np.array(wide, order="C", copy=True if shared else None, subok=False)
+    array = cast(Dense, np.array(wide, order="C", copy=True if shared else None, subok=False))
     require_finite(array, what)
     return array, notes + _imaginary_note(array)
 

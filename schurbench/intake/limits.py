@@ -9,16 +9,16 @@ from schurbench.errors import InputError
 
 __all__ = ["available_bytes", "readable_size", "require_memory", "require_room", "run_bytes"]
 
-ARRAYS_IN_A_RUN = 6
-"""Dense n × n arrays alive at the peak of a run: the matrix, the Hessenberg start with its Z, the working H and Z, and
-LAPACK's workspace."""
+ARRAYS_IN_A_RUN = 10
+"""Dense n × n arrays' worth of memory at the peak of a run, its recorded bands included and the checkpoints of its history
+left out. Measured with tracemalloc at n = 400 with ``keep="1 MiB"``: 10.2 in real arithmetic and 9.6 in complex."""
 
 ASSUMED_BYTES = 4 * 2**30
 """Taken as the memory of a machine that does not tell: small enough to be safe on a present-day laptop."""
 
 
 def run_bytes(n: int, *, is_complex: bool = False) -> int:
-    """Memory that a run on a dense matrix takes, without its step history.
+    """Memory that a run on a dense matrix takes, without the checkpoints of its history.
 
     Parameters
     ----------
@@ -30,7 +30,7 @@ def run_bytes(n: int, *, is_complex: bool = False) -> int:
     Returns
     -------
     int
-        Bytes: `ARRAYS_IN_A_RUN` dense arrays. The history has its own limit, the setting ``keep``.
+        Bytes: `ARRAYS_IN_A_RUN` dense arrays. Checkpoints have their own limit, the setting ``keep``.
     """
     return ARRAYS_IN_A_RUN * n * n * (16 if is_complex else 8)
 

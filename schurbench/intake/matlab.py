@@ -52,6 +52,7 @@ def _read_classic(path: Path, key: str | None, what: str) -> Found:
             str(name), tuple(int(length) for length in shape), None if sort in _NUMBERS | {"sparse"} else str(sort)
         )
         for name, shape, sort in listed
+        if name != "__function_workspace__"  # where MATLAB keeps what anonymous functions refer to
     ]
     chosen, notes = choose(candidates, key, what)
     candidate = next(c for c in candidates if c.name == chosen)

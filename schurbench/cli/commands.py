@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import argparse
 import importlib.util
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -16,13 +16,11 @@ if TYPE_CHECKING:
     from schurbench.factors import Factors
     from schurbench.intake import WorkingMatrix
     from schurbench.journal import Run
+    from schurbench.prepare import Profile
 
 __all__ = ["carry_out"]
 
-DONE, NOT_CONVERGED, INTERRUPTED = 0, 3, 130
-
-#: Largest file of state names read, in bytes: far above any plant, far below the memory.
-LARGEST_LABELS = 16 * 2**20
+DONE, BAD_INPUT, NOT_CONVERGED, INTERRUPTED = 0, 2, 3, 130
 
 
 def carry_out(args: argparse.Namespace, console: Console) -> int:
@@ -40,20 +38,19 @@ def profile(args: argparse.Namespace, console: Console) -> int:
         console.json(p.to_dict())
         return DONE
     _introduce(m, console)
-    for remark in p.remarks:
-        console.say(remark)
+    for remark in p.remarks or ("Nothing stands out.",):
+        console.sentence(remark)
     console.say()
-    console.table(("fact", "value"), [(name, _cell(value)) for name, value in p.to_dict().items() if name != "remarks"])
+    console.table(("property", "value"), _facts(p))
     return DONE
 
 
 def run(args: argparse.Namespace, console: Console) -> int:
     """Iterate on FILE and save the run."""
-    _require_suffix(args.out, (".npz",), "a run is saved as")
     _require_free([args.out], args.replace, args.file)
     m = _load(args)
     result = _iterate(m, args, console, accumulate=not args.no_vectors, stop_when_stalled=args.stop_when_stalled)
-    result.save(args.out)
+    result.save(args.out, replace=args.replace)
     if args.json:
         console.json(result.to_dict())
     else:
@@ -72,7 +69,7 @@ def explain(args: argparse.Namespace, console: Console) -> int:
     result = _run_of(args, console)
     diagnosis = sb.diagnose(result, try_remedies=args.try_remedies)
     if args.html is not None:
-        _write(args.html, diagnosis.to_html())
+        args.html.write_text(diagnosis.to_html(), encoding="utf-8")
     if args.json:
         console.json(diagnosis.to_dict())
     else:
@@ -87,24 +84,42 @@ def explain(args: argparse.Namespace, console: Console) -> int:
 
 def export(args: argparse.Namespace, console: Console) -> int:
     """Certified factors of FILE, or of the matrix in RUN."""
-    from schurbench.factors.writers import FORMATS, paths_of
-
-    _require_suffix(args.out, tuple(FORMATS), "factors are saved as")
-    _require_free(paths_of(args.out), args.replace, args.file)
+    _require_free(_files_of(args.out), args.replace, args.file)
     result = _run_of(args, console)
     factors: Factors = result.factors()
     if args.reorder is not None:
         factors = factors.reorder(args.reorder)
-    written = factors.save(args.out)
+    written = factors.save(args.out, replace=args.replace)
     certificate = factors.certificate()
     if args.json:
-        console.json({"files": written, "certificate": certificate.to_dict()})
+        console.json({"files": [str(path) for path in written], **factors.to_dict()})
     else:
         _introduce(result.matrix, console)
         _tell(result, console)
-        console.say(certificate.sentence)
+        for sentence in (certificate.sentence, factors.trust, *factors.notes):
+            console.sentence(sentence)
         console.say(f"Saved {', '.join(str(path) for path in written)}.")
     return _code(result)
+
+
+def check(args: argparse.Namespace, console: Console) -> int:
+    """Whether saved factors still are what MANIFEST says."""
+    import schurbench as sb
+    from schurbench.factors import check_manifest
+
+    matrix = sb.load(args.input, key=args.key) if args.input is not None else None
+    report = check_manifest(args.file, matrix)
+    if args.json:
+        console.json(report.to_dict())
+    else:
+        for line in (*report.checked, *report.unchecked):
+            console.say(line)
+    if not report.passed:
+        console.fail(" ".join(report.failures))
+        return BAD_INPUT
+    if not args.json:
+        console.say("Passed." if not report.unchecked else "Passed as far as it could be checked.")
+    return DONE
 
 
 def warm(args: argparse.Namespace, console: Console) -> int:
@@ -149,19 +164,7 @@ def demo(args: argparse.Namespace, console: Console) -> int:
 def _load(args: argparse.Namespace) -> WorkingMatrix:
     import schurbench as sb
 
-    labels = _read_labels(args.labels) if getattr(args, "labels", None) is not None else None
-    return sb.load(args.file, key=getattr(args, "key", None), labels=labels)
-
-
-def _read_labels(path: Path) -> list[str]:
-    if not path.is_file():
-        raise InputError(f"{path} with the state names is not a file; give a text file with one name a line")
-    if path.stat().st_size > LARGEST_LABELS:
-        raise InputError(f"{path} with the state names has {path.stat().st_size} bytes; give one short name a line")
-    try:
-        return path.read_text(encoding="utf-8-sig").splitlines()
-    except UnicodeDecodeError:
-        raise InputError(f"{path} with the state names is not UTF-8 text; save it as UTF-8, one name a line") from None
+    return sb.load(args.file, key=args.key, labels=args.labels)
 
 
 def _settings(args: argparse.Namespace) -> dict[str, Any]:
@@ -196,6 +199,7 @@ def _iterate(m: WorkingMatrix, args: argparse.Namespace, console: Console, **fur
     import schurbench as sb
 
     with interruptible() as cancel:
+        console.status("starting; the first run of all compiles its kernels, which takes up to a minute", at_once=True)
         return sb.iterate(m, progress=console.progress(m.n), cancel=cancel, **_settings(args), **further)
 
 
@@ -209,16 +213,16 @@ def _introduce(m: WorkingMatrix, console: Console) -> None:
     kind = "real" if m.is_real else "complex"
     console.say(f"{m.name}: {kind}, n = {m.n}, from {m.source}.")
     for note in m.notes:
-        console.say(note)
+        console.sentence(note)
 
 
 def _tell(result: Run, console: Console) -> None:
     from schurbench.prepare.plain import plural
 
     s = result.settings
-    console.say(
+    console.sentence(
         f"{plural(result.sweeps, 'sweep')} in {figure(result.seconds)} s with strategy {s.strategy}, {s.form} form, "
-        f"balance {s.balance}, deflation test {s.deflation}. {result.stop.message}"
+        f"balance {s.balance}, deflation test {s.deflation}: {result.stop.message}."
     )
 
 
@@ -235,22 +239,36 @@ def _require_free(paths: list[Path], replace: bool, source: Path | None = None) 
             raise InputError(f"{path} already exists; choose another name, or add --replace to overwrite it")
 
 
-def _require_suffix(path: Path, suffixes: tuple[str, ...], what: str) -> None:
-    if path.suffix.lower() not in suffixes:
-        raise InputError(f"{path} does not say its format; {what} {' or '.join(suffixes)}")
+def _files_of(out: Path) -> list[Path]:
+    """Every file that saving factors as `out` writes."""
+    from schurbench.factors.writers import FORMATS, MANIFEST_SUFFIX
+
+    layout = FORMATS.get(out.suffix.lower())
+    if layout is None:
+        raise InputError(f"factors cannot be saved as {out.name!r}; end the name in one of {', '.join(FORMATS)}")
+    return [*(out.with_name(f"{out.stem}{part}{out.suffix}") for part in layout.parts), Path(f"{out}{MANIFEST_SUFFIX}")]
 
 
-def _write(path: Path, text: str) -> None:
-    path.write_text(text, encoding="utf-8")
-
-
-def _cell(value: object) -> object:
-    if isinstance(value, Mapping):
-        return ", ".join(f"{name} {figure(item)}" for name, item in value.items())
-    if isinstance(value, list):
-        shown = ", ".join(figure(item) for item in value[:8])
-        return f"{shown}, … ({len(value)} in all)" if len(value) > 8 else shown
-    return value
+def _facts(p: Profile) -> list[tuple[str, str]]:
+    """The profile as a reader wants it; `--json` has every field by name."""
+    lo, hi = p.isolated
+    departure = (
+        f"{figure(p.departure_lower)} to {figure(p.departure_upper)}" if p.departure is None else figure(p.departure)
+    )
+    return [
+        ("norms (1, ∞, Frobenius)", f"{figure(p.norm_one)}, {figure(p.norm_inf)}, {figure(p.norm_frobenius)}"),
+        ("largest entry", figure(p.norm_max)),
+        ("structure to rounding", ", ".join(p.structures) or "none"),
+        ("departure from normality (Henrici, of the norm)", departure),
+        ("balancing shrinks the 1-norm", f"{figure(p.balance_factor)}-fold (balance={p.balance_choice})"),
+        ("decades between row norms, column norms", f"{figure(p.row_norm_decades)}, {figure(p.column_norm_decades)}"),
+        ("rows left after permuting", f"{hi - lo} of {p.n}"),
+        ("strongly connected components", f"{p.components}, the largest with {max(p.component_sizes)}"),
+        ("bandwidth below, above the diagonal", f"{p.lower_bandwidth}, {p.upper_bandwidth}"),
+        ("entries that are not zero", f"{figure(100.0 * p.density)} %"),
+        ("subnormal numbers", figure(p.subnormal)),
+        ("estimated run", f"{figure(p.seconds_estimate)} s, {figure(p.memory_estimate / 2**20)} MiB"),
+    ]
 
 
 _COMMANDS: dict[str, Callable[[argparse.Namespace, Console], int]] = {
@@ -258,6 +276,7 @@ _COMMANDS: dict[str, Callable[[argparse.Namespace, Console], int]] = {
     "run": run,
     "explain": explain,
     "export": export,
+    "check": check,
     "warm": warm,
     "open": open_workbench,
     "demo": demo,

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import json
+import shutil
 import signal
 import sys
+import textwrap
 import threading
 import time
 from collections.abc import Callable, Iterator, Sequence
@@ -41,6 +43,12 @@ class Console:
         """One line, or several, of data on stdout."""
         self._clear()
         print(text, file=self._out)
+
+    def sentence(self, text: str) -> None:
+        """A sentence or paragraph: wrapped in a terminal, one line where another program reads it."""
+        if self._out.isatty():
+            text = textwrap.fill(text, min(100, shutil.get_terminal_size().columns))
+        self.say(text)
 
     def json(self, value: object) -> None:
         """Strict JSON on stdout: infinities become the strings "inf" and "-inf", NaN becomes null."""
@@ -89,15 +97,17 @@ class Console:
 
         return show
 
-    def status(self, text: str) -> None:
+    def status(self, text: str, *, at_once: bool = False) -> None:
         """Say where the work is: one rewritten line in a terminal, an occasional line elsewhere."""
         now = time.monotonic()
-        if now - self._last < (SECONDS_BETWEEN_REWRITES if self._tty else SECONDS_BETWEEN_LINES):
+        due = now - self._last >= (SECONDS_BETWEEN_REWRITES if self._tty else SECONDS_BETWEEN_LINES)
+        if not (due or (at_once and self._tty)):
             return
         self._last = now
         if self._tty:
-            self._err.write("\r" + text[:119].ljust(self._shown))
-            self._shown = len(text[:119])
+            text = text[: max(20, shutil.get_terminal_size().columns - 1)]
+            self._err.write("\r" + text.ljust(self._shown))
+            self._shown = len(text)
         else:
             self._err.write(text + "\n")
         self._err.flush()

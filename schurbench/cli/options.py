@@ -99,7 +99,9 @@ def build_parser() -> argparse.ArgumentParser:
         help="left-half-plane or unit-disc: these eigenvalues first (pairs stay together)",
     )
 
-    add("check", _positional("MANIFEST", "manifest beside saved factors (.json)"), json)
+    check = add("check", _positional("MANIFEST", "the .manifest.json file beside saved factors"), json)
+    check.add_argument("--input", metavar="FILE", type=Path, help="the input matrix, where it has moved since")
+    check.add_argument("--key", metavar="NAME", help="which array, where the input holds several")
     add("twin", _positional("FILE", "matrix file"), source, settings, json)
 
     survey = add(

@@ -53,7 +53,37 @@ _HOME = {
     "SchurbenchError": "schurbench.errors",
 }
 
-__all__ = ["__version__", *sorted(_HOME)]  # noqa: PLE0604
+# Written out, because type checkers do not evaluate an expression here.
+__all__ = [
+    "Certificate",
+    "Comparison",
+    "Deflation",
+    "Diagnosis",
+    "Factors",
+    "Finding",
+    "InputError",
+    "Iteration",
+    "Profile",
+    "Progress",
+    "Run",
+    "SchurbenchError",
+    "SettingsError",
+    "State",
+    "Step",
+    "StopReason",
+    "Workbench",
+    "WorkingMatrix",
+    "__version__",
+    "compare",
+    "demo_matrix",
+    "diagnose",
+    "iterate",
+    "load",
+    "open_run",
+    "profile",
+    "survey",
+    "twin",
+]
 
 
 def __getattr__(name: str) -> Any:

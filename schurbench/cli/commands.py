@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import argparse
-import importlib.util
 from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -13,12 +12,13 @@ from schurbench.cli.options import SETTINGS
 from schurbench.errors import InputError, SettingsError
 
 if TYPE_CHECKING:
+    from schurbench.comparison import Comparison
     from schurbench.factors import Factors
     from schurbench.intake import WorkingMatrix
     from schurbench.journal import Run
     from schurbench.prepare import Profile
 
-__all__ = ["carry_out"]
+__all__ = ["carry_out", "describe_run", "introduce", "tabulate"]
 
 DONE, BAD_INPUT, NOT_CONVERGED, INTERRUPTED = 0, 2, 3, 130
 
@@ -37,7 +37,7 @@ def profile(args: argparse.Namespace, console: Console) -> int:
     if args.json:
         console.json(p.to_dict())
         return DONE
-    _introduce(m, console)
+    introduce(m, console)
     for remark in p.remarks or ("Nothing stands out.",):
         console.sentence(remark)
     console.say()
@@ -54,8 +54,8 @@ def run(args: argparse.Namespace, console: Console) -> int:
     if args.json:
         console.json(result.to_dict())
     else:
-        _introduce(m, console)
-        _tell(result, console)
+        introduce(m, console)
+        describe_run(result, console)
         console.say(f"Saved to {args.out}.")
     return _code(result)
 
@@ -73,13 +73,33 @@ def explain(args: argparse.Namespace, console: Console) -> int:
     if args.json:
         console.json(diagnosis.to_dict())
     else:
-        _introduce(result.matrix, console)
-        _tell(result, console)
+        introduce(result.matrix, console)
+        describe_run(result, console)
         console.say()
         console.say(str(diagnosis))
         if args.html is not None:
             console.say(f"\nWritten to {args.html}.")
     return INTERRUPTED if result.stop.reason == "cancelled" and not _is_run(args.file) else DONE
+
+
+def compare(args: argparse.Namespace, console: Console) -> int:
+    """Several settings side by side on FILE."""
+    import schurbench as sb
+
+    m = _load(args)
+    common = _settings(args)
+    named = str(common.pop("strategy", "")).replace(",", " ").split()
+    entries = [*named, *(args.entries or [])] or None
+    with interruptible() as cancel:
+        result = sb.compare(m, entries, progress=console.progress(m.n), cancel=cancel, **common)
+    if all(entry.run is None for entry in result.entries) and not cancel.is_set():
+        raise SettingsError(f"no entry could be run: {result.entries[0].error}")
+    if args.json:
+        console.json(result.to_dict())
+    else:
+        introduce(m, console)
+        tabulate(result, console)
+    return INTERRUPTED if cancel.is_set() else DONE
 
 
 def export(args: argparse.Namespace, console: Console) -> int:
@@ -94,8 +114,8 @@ def export(args: argparse.Namespace, console: Console) -> int:
     if args.json:
         console.json({"files": [str(path) for path in written], **factors.to_dict()})
     else:
-        _introduce(result.matrix, console)
-        _tell(result, console)
+        introduce(result.matrix, console)
+        describe_run(result, console)
         for sentence in (certificate.sentence, factors.trust, *factors.notes):
             console.sentence(sentence)
         console.say(f"Saved {', '.join(str(path) for path in written)}.")
@@ -142,16 +162,10 @@ def warm(args: argparse.Namespace, console: Console) -> int:
 
 def open_workbench(args: argparse.Namespace, console: Console) -> int:
     """JupyterLab with the workbench."""
-    missing = [name for name in ("jupyterlab", "ipywidgets", "bqplot") if importlib.util.find_spec(name) is None]
-    if missing:
-        raise InputError(
-            f"the workbench needs {' and '.join(missing)}; install with pip install 'schurbench[workbench]'"
-        )
-    if args.file is not None:
-        _load(args)  # a file that cannot be used is refused here, not inside a notebook
     from schurbench.panels import serve
 
-    return int(serve.open_workbench(args.file, key=args.key, page=args.page, browser=not args.no_browser) or DONE)
+    code: int = serve.open_workbench(args.file, key=args.key, page=args.page, browser=not args.no_browser)
+    return code
 
 
 def demo(args: argparse.Namespace, console: Console) -> int:
@@ -159,6 +173,30 @@ def demo(args: argparse.Namespace, console: Console) -> int:
     from schurbench.cli.demo import tell
 
     return tell(args.out, args.n, args.replace, console)
+
+
+def tabulate(result: Comparison, console: Console) -> None:
+    """A comparison as a table, what failed, and the outcome."""
+    columns = ("entry", "sweeps", "per eigenvalue", "exceptional", "seconds", "backward error", "orthogonality", "stop")
+    rows = [
+        (
+            entry.label,
+            entry.figures.sweeps,
+            entry.figures.sweeps_per_eigenvalue,
+            entry.figures.exceptional_shifts,
+            entry.figures.seconds,
+            entry.figures.backward_error,
+            entry.figures.orthogonality,
+            entry.figures.stop,
+        )
+        for entry in result.entries
+        if entry.figures is not None
+    ]
+    console.table(columns, rows)
+    for entry in result.entries:
+        if entry.error is not None:
+            console.sentence(f"{entry.label} failed: {entry.error}.")
+    console.sentence(result.sentence)
 
 
 def _load(args: argparse.Namespace) -> WorkingMatrix:
@@ -209,14 +247,16 @@ def _code(result: Run) -> int:
     return DONE if result.converged else NOT_CONVERGED
 
 
-def _introduce(m: WorkingMatrix, console: Console) -> None:
+def introduce(m: WorkingMatrix, console: Console) -> None:
+    """Which matrix this is, and what was done to it on the way in."""
     kind = "real" if m.is_real else "complex"
     console.say(f"{m.name}: {kind}, n = {m.n}, from {m.source}.")
     for note in m.notes:
         console.sentence(note)
 
 
-def _tell(result: Run, console: Console) -> None:
+def describe_run(result: Run, console: Console) -> None:
+    """What a run did and why it ended, in a sentence."""
     from schurbench.prepare.plain import plural
 
     s = result.settings
@@ -275,6 +315,7 @@ _COMMANDS: dict[str, Callable[[argparse.Namespace, Console], int]] = {
     "profile": profile,
     "run": run,
     "explain": explain,
+    "compare": compare,
     "export": export,
     "check": check,
     "warm": warm,

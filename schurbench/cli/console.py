@@ -79,16 +79,15 @@ class Console:
         line = " ".join(message.split())
         self.note(f"schurbench: {line}")
 
-    def progress(self, n: int, what: str = "") -> Callable[[Progress], None]:
-        """A callback for `schurbench.iterate` on a matrix of order `n`."""
-        prefix = f"{what}: " if what else ""
+    def progress(self, n: int) -> Callable[[Progress], None]:
+        """A callback for `schurbench.iterate` or `schurbench.compare` on a matrix of order `n`."""
 
         def show(event: Progress) -> None:
             if event.phase == "done":
                 self._clear()
-            elif event.phase == "reduce":
-                self.status(f"{prefix}reducing to Hessenberg form, {figure(event.seconds)} s")
             else:
+                entry = getattr(event, "entry", None)  # a comparison says which of its entries is at work
+                prefix = "" if entry is None else f"{entry}: "
                 left = "" if event.forecast is None else f", about {figure(event.forecast)} s left"
                 self.status(
                     f"{prefix}{event.sweeps} sweeps, {event.deflated} of {n} rows final, "

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import argparse
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import NoReturn
 
@@ -55,7 +55,7 @@ def build_parser() -> argparse.ArgumentParser:
     parser.add_argument("--version", action="version", version=f"schurbench {__version__}")
     commands = parser.add_subparsers(dest="command", required=True, metavar="COMMAND", title="commands")
 
-    def add(name: str, *parents: argparse.ArgumentParser) -> argparse.ArgumentParser:
+    def add(name: str, *parents: _OneLineParser) -> argparse.ArgumentParser:
         text = COMMANDS[name]
         return commands.add_parser(
             name, help=text, description=text[0].upper() + text[1:] + ".", parents=parents, allow_abbrev=False
@@ -74,12 +74,13 @@ def build_parser() -> argparse.ArgumentParser:
     explain.add_argument("--html", metavar="OUT", type=Path, help="also write the explanation as one page")
     explain.add_argument("--try", dest="try_remedies", action="store_true", help="run each remedy and compare")
 
-    compare = add("compare", _positional("FILE", "matrix file"), source, settings, json)
+    compare = add("compare", _positional("FILE", "matrix file"), source, _setting_options(several=True), json)
     compare.add_argument(
         "--with",
         dest="entries",
         metavar="SETTINGS",
         action="append",
+        type=_entry,
         help="one entry, such as 'francis' or 'francis balance=scale flip=yes'; repeat for more "
         "(other options apply to every entry)",
     )
@@ -111,9 +112,8 @@ def build_parser() -> argparse.ArgumentParser:
 
     add("warm", json)
 
-    workbench = add(
-        "open", _positional("FILE", "matrix file; without it, the demonstration plant", optional=True), source
-    )
+    workbench = add("open", _positional("FILE", "matrix file; without it, the demonstration plant", optional=True))
+    workbench.add_argument("--key", metavar="NAME", help="which array, where the file holds several")
     workbench.add_argument("--page", action="store_true", help="a plain page without notebook cells")
     workbench.add_argument("--no-browser", action="store_true", help="only print the address")
 
@@ -125,24 +125,28 @@ def build_parser() -> argparse.ArgumentParser:
     return parser
 
 
-def _positional(name: str, text: str, optional: bool = False) -> argparse.ArgumentParser:
-    parent = argparse.ArgumentParser(add_help=False)
+def _positional(name: str, text: str, optional: bool = False) -> _OneLineParser:
+    parent = _OneLineParser(add_help=False)
     parent.add_argument("file", metavar=name, type=Path, nargs="?" if optional else None, help=text)
     return parent
 
 
-def _source_options() -> argparse.ArgumentParser:
-    parent = argparse.ArgumentParser(add_help=False)
+def _source_options() -> _OneLineParser:
+    parent = _OneLineParser(add_help=False)
     group = parent.add_argument_group("the matrix")
     group.add_argument("--key", metavar="NAME", help="which array, where the file holds several")
     group.add_argument("--labels", metavar="FILE", type=Path, help="text file with the name of one state a line")
     return parent
 
 
-def _setting_options() -> argparse.ArgumentParser:
-    parent = argparse.ArgumentParser(add_help=False)
+def _setting_options(several: bool = False) -> _OneLineParser:
+    parent = _OneLineParser(add_help=False)
     group = parent.add_argument_group("settings")
-    group.add_argument("--strategy", metavar="NAME", help="zero, rayleigh, wilkinson, francis, given or auto")
+    group.add_argument(
+        "--strategy",
+        metavar="NAME",
+        help="zero, rayleigh, wilkinson, francis, given or auto" + ("; several with commas between" if several else ""),
+    )
     group.add_argument(
         "--shifts",
         metavar="LIST",
@@ -164,16 +168,38 @@ def _setting_options() -> argparse.ArgumentParser:
     return parent
 
 
-def _json_option() -> argparse.ArgumentParser:
-    parent = argparse.ArgumentParser(add_help=False)
+def _json_option() -> _OneLineParser:
+    parent = _OneLineParser(add_help=False)
     parent.add_argument("--json", action="store_true", help="print JSON instead of sentences")
     return parent
 
 
-def _replace_option() -> argparse.ArgumentParser:
-    parent = argparse.ArgumentParser(add_help=False)
+def _replace_option() -> _OneLineParser:
+    parent = _OneLineParser(add_help=False)
     parent.add_argument("--replace", action="store_true", help="overwrite what is already there")
     return parent
+
+
+def _entry(text: str) -> dict[str, object]:
+    """Keywords of `schurbench.iterate` from words such as ``francis balance=scale flip=yes``."""
+    keywords: dict[str, object] = {}
+    for word in text.split():
+        name, equals, value = word.partition("=")
+        if not equals:
+            name, value = "strategy", word
+        if name not in SETTINGS:
+            raise argparse.ArgumentTypeError(
+                f"there is no setting {name!r} in {text!r}; known are {', '.join(SETTINGS)}"
+            )
+        if name in keywords:
+            raise argparse.ArgumentTypeError(f"{text!r} sets {name} twice; give it once")
+        try:
+            keywords[name] = _CONVERTERS.get(name, str)(value)
+        except (KeyError, ValueError):
+            raise argparse.ArgumentTypeError(f"{value!r} is no value for {name} in {text!r}") from None
+    if not keywords:
+        raise argparse.ArgumentTypeError("an entry is empty; give at least a strategy")
+    return keywords
 
 
 def _shifts(text: str) -> list[complex]:
@@ -183,3 +209,12 @@ def _shifts(text: str) -> list[complex]:
         raise argparse.ArgumentTypeError(
             f"{text!r} is not a list of numbers with commas between, such as -1.5,2+3j"
         ) from None
+
+
+_CONVERTERS: dict[str, Callable[[str], object]] = {
+    "shifts": _shifts,
+    "flip": lambda text: {"yes": True, "no": False}[text],
+    "tol": float,
+    "exceptional": int,
+    "limit": int,
+}

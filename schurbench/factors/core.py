@@ -241,7 +241,10 @@ def _trust(factors: Factors) -> str:
     found = np.isfinite(factors.eigenvalues)
     sentences = []
     if not found.any():
-        return "No eigenvalue has been found yet: T is still Hessenberg throughout."
+        scaled = (
+            "" if factors.scaled is None else " Eigenvalues of the scaled pair (.scaled) are there as far as it got."
+        )
+        return "No eigenvalue has been found yet: T is still Hessenberg throughout." + scaled
     if not factors.complete:
         missing = int(np.count_nonzero(~found))
         sentences.append(
@@ -256,9 +259,12 @@ def _trust(factors: Factors) -> str:
             "to working precision. Trust the mean of such a cluster rather than its members."
         )
     else:
+        hopeless = movement[worst] >= np.linalg.norm(factors.T)
+        beyond = ", more than the norm of A, so no digit of it is determined" if hopeless else ""
         sentences.append(
             f"The worst-conditioned eigenvalue, {_complex(factors.eigenvalues[worst])}, has condition number "
-            f"{number(condition[worst])}: one unit of rounding in A moves it by about {number(movement[worst])}."
+            f"{number(condition[worst])}: one unit of rounding in A moves it by about "
+            f"{number(movement[worst])}{beyond}."
         )
     if factors.scaled is not None:
         sentences.append(_which_pair(factors, factors.scaled))
@@ -266,7 +272,7 @@ def _trust(factors: Factors) -> str:
     if undecided:
         sentences.append(
             f"{plural(undecided, 'eigenvalue lies', 'eigenvalues lie')} closer to the imaginary axis than one unit of "
-            "rounding moves it, so the sign of the real part is not determined."
+            f"rounding moves {'it' if undecided == 1 else 'them'}, so the sign of the real part is not determined."
         )
     return " ".join([*sentences, CAUTION])
 

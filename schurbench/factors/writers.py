@@ -22,7 +22,7 @@ from schurbench.prepare.plain import plain
 if TYPE_CHECKING:
     from schurbench.factors.core import Factors
 
-__all__ = ["FORMATS", "MANIFEST_KIND", "MANIFEST_VERSION", "file_sha256", "read_factor", "save_factors"]
+__all__ = ["FORMATS", "MANIFEST_KIND", "MANIFEST_VERSION", "file_sha256", "paths_of", "read_factor", "save_factors"]
 
 MANIFEST_SUFFIX = ".manifest.json"
 MANIFEST_KIND = "schurbench factors"
@@ -88,6 +88,28 @@ FORMATS: dict[str, Format] = {
 }
 
 
+def paths_of(path: Path) -> tuple[Path, ...]:
+    """Every file that saving factors as `path` writes, the manifest last.
+
+    Raises
+    ------
+    InputError
+        Unknown suffix.
+    """
+    parts = _format_of(path).parts
+    return (
+        *(path.with_name(f"{path.stem}{part}{path.suffix}") for part in parts),
+        path.with_name(path.name + MANIFEST_SUFFIX),
+    )
+
+
+def _format_of(path: Path) -> Format:
+    layout = FORMATS.get(path.suffix.lower())
+    if layout is None:
+        raise InputError(f"factors cannot be saved as {path.name!r}; end the name in one of {', '.join(FORMATS)}")
+    return layout
+
+
 def save_factors(factors: Factors, path: Path, replace: bool = False) -> tuple[Path, ...]:
     """Write the factors and their manifest; see `Factors.save`.
 
@@ -96,14 +118,12 @@ def save_factors(factors: Factors, path: Path, replace: bool = False) -> tuple[P
     Everything is first written under temporary names in the same folder, and takes its name only when all of it is on
     disk. Without `replace` a name that another program takes in the meantime is not overwritten either.
     """
-    layout = FORMATS.get(path.suffix.lower())
-    if layout is None:
-        raise InputError(f"factors cannot be saved as {path.name!r}; end the name in one of {', '.join(FORMATS)}")
+    layout = _format_of(path)
     folder = path.parent
     if not folder.is_dir():
         raise InputError(f"there is no folder {str(folder)!r} to save in; create it first")
-    targets = {folder / f"{path.stem}{part}{path.suffix}": names for part, names in layout.parts.items()}
-    manifest = path.with_name(path.name + MANIFEST_SUFFIX)
+    *places, manifest = paths_of(path)
+    targets = dict(zip(places, layout.parts.values(), strict=True))
     taken = [target.name for target in [*targets, manifest] if target.exists()]
     if taken and not replace:
         raise InputError(f"{', '.join(taken)} exists already; choose another name, or overwrite with replace=True")

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -25,7 +25,7 @@ if TYPE_CHECKING:
 __all__ = ["Run"]
 
 
-@dataclass(eq=False)
+@dataclass(eq=False, repr=False)
 class Run:
     """The record of one iteration on one matrix.
 
@@ -53,7 +53,10 @@ class Run:
     stop: Stop
     phases: dict[str, float]
     environment: dict[str, Any]
-    _final: tuple[Array, Array] = field(repr=False)
+    _final: tuple[Array, Array]
+
+    def __repr__(self) -> str:
+        return f"<Run of {self.settings.strategy} on {self.matrix.name}, n = {self.n}: {self.stop.message}>"
 
     @property
     def n(self) -> int:

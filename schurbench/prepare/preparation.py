@@ -153,14 +153,14 @@ def _gehrd(a: Array, lo: int, hi: int, accumulate: bool) -> tuple[Array, Array |
     if n < 3:
         return np.array(a, order="C"), (np.eye(n, dtype=a.dtype) if accumulate else None)
     gehrd, gehrd_lwork = get_lapack_funcs(("gehrd", "gehrd_lwork"), (a,))
-    lwork = int(gehrd_lwork(n, lo=lo, hi=hi - 1)[0].real)
+    lwork = max(n, int(gehrd_lwork(n, lo=lo, hi=hi - 1)[0].real))
     packed, tau, _ = gehrd(a, lo=lo, hi=hi - 1, lwork=lwork)
     H = np.ascontiguousarray(np.triu(packed, -1))
     if not accumulate:
         return H, None
     name = "orghr" if a.dtype == np.float64 else "unghr"
     orghr, orghr_lwork = get_lapack_funcs((name, name + "_lwork"), (a,))
-    lwork = int(orghr_lwork(n, lo=lo, hi=hi - 1)[0].real)
+    lwork = max(n, int(orghr_lwork(n, lo=lo, hi=hi - 1)[0].real))
     Q, _ = orghr(packed, tau, lo=lo, hi=hi - 1, lwork=lwork, overwrite_a=1)
     return H, np.ascontiguousarray(Q)
 

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 from schurbench.cli.console import Console, figure, interruptible
 from schurbench.cli.options import SETTINGS
-from schurbench.errors import InputError, SettingsError
+from schurbench.errors import InputError, SchurbenchError, SettingsError
 
 if TYPE_CHECKING:
     from schurbench.comparison import Comparison
@@ -140,6 +140,69 @@ def check(args: argparse.Namespace, console: Console) -> int:
     if not args.json:
         console.say("Passed." if not report.unchecked else "Passed as far as it could be checked.")
     return DONE
+
+
+def twin(args: argparse.Namespace, console: Console) -> int:
+    """Whether the job on FILE comes out differently on another kind of machine."""
+    import schurbench as sb
+
+    m = _load(args)
+    console.note("Running the job in two fresh processes; the first time, kernels are compiled for both.")
+    with interruptible() as cancel:
+        try:
+            result = sb.twin(m, cancel=cancel, **_settings(args))
+        except SchurbenchError:
+            if cancel.is_set():
+                raise KeyboardInterrupt from None
+            raise
+    if args.json:
+        console.json(result.to_dict())
+        return DONE
+    introduce(m, console)
+    rows = [
+        (name, " ".join(f"{key}={value}" for key, value in job.conditions.items()), job.sweeps, job.seconds, job.stop)
+        for name, job in (("first", result.first), ("second", result.second))
+    ]
+    console.table(("job", "conditions", "sweeps", "seconds", "stop"), rows)
+    console.sentence(result.sentence)
+    return DONE
+
+
+def survey(args: argparse.Namespace, console: Console) -> int:
+    """The same settings on every matrix of SOURCE."""
+    import schurbench as sb
+
+    _require_free([args.out], args.replace, args.file)
+
+    def show(name: str, place: int, count: int) -> None:
+        console.status(f"matrix {place + 1} of {count}: {name}")
+
+    with interruptible() as cancel:
+        result = sb.survey(
+            args.file, out=args.out, replace=args.replace, progress=show, cancel=cancel, **_settings(args)
+        )
+    if args.json:
+        console.json(result.to_dict())
+    else:
+        rows = [
+            (
+                row.name,
+                row.n,
+                row.figures.sweeps,
+                row.figures.stop,
+                row.figures.backward_error,
+                row.condition,
+                row.cause,
+            )
+            for row in result.rows
+            if row.figures is not None
+        ]
+        console.table(("matrix", "n", "sweeps", "stop", "backward error", "worst condition", "first finding"), rows)
+        for row in result.failures:
+            console.sentence(f"{row.name} failed: {row.error}.")
+        console.sentence(result.sentence)
+        console.say(f"Saved to {args.out}.")
+    return INTERRUPTED if cancel.is_set() else DONE
 
 
 def warm(args: argparse.Namespace, console: Console) -> int:
@@ -318,6 +381,8 @@ _COMMANDS: dict[str, Callable[[argparse.Namespace, Console], int]] = {
     "compare": compare,
     "export": export,
     "check": check,
+    "twin": twin,
+    "survey": survey,
     "warm": warm,
     "open": open_workbench,
     "demo": demo,

@@ -1,8 +1,9 @@
-"""The whole job in the terminal, on the demonstration plant: what every command does, in the order an engineer needs it."""
+"""The whole job in the terminal, on the demonstration plant, in the order an engineer needs it."""
 
 from __future__ import annotations
 
 from pathlib import Path
+from shlex import quote
 from typing import TYPE_CHECKING
 
 from schurbench.errors import InputError
@@ -47,8 +48,8 @@ def tell(folder: Path, n: int | None, replace: bool, console: Console) -> int:
 
     console.say("1. The matrix")
     console.sentence(
-        f"A chain of identical irrigation-canal reaches with a controller at each gate, {plant.n} states in mixed units, "
-        f"written to {matrix_file} as your own matrix would be."
+        f"A chain of identical irrigation-canal reaches, each with a controller: {plant.n} states in mixed units, "
+        f"written to {matrix_file} and read back as your own matrix would be."
     )
     m = sb.load(matrix_file, labels=label_file)
     introduce(m, console)
@@ -70,7 +71,7 @@ def tell(folder: Path, n: int | None, replace: bool, console: Console) -> int:
                     console.sentence(f"  Try: {finding.remedy.text}")
 
             console.say("\n4. Other strategies and settings on the same matrix")
-            entries = ["francis", {"strategy": "francis", "balance": "both"}, "wilkinson"]
+            entries: list[str | dict[str, str]] = ["francis", {"strategy": "francis", "balance": "both"}, "wilkinson"]
             comparison = sb.compare(m, entries, progress=console.progress(m.n), cancel=cancel)
             tabulate(comparison, console)
 
@@ -86,10 +87,10 @@ def tell(folder: Path, n: int | None, replace: bool, console: Console) -> int:
     console.table(
         ("command", "what it shows"),
         [
-            (f"schurbench explain {run_file}", "all findings, with evidence"),
-            (f"schurbench profile {matrix_file}", "everything known before iterating"),
-            (f"schurbench check {manifest}", "whether the factors are still what they were"),
-            (f"schurbench open {matrix_file}", "the same in JupyterLab, sweep by sweep"),
+            (f"schurbench explain {quote(str(run_file))}", "all findings, with evidence"),
+            (f"schurbench profile {quote(str(matrix_file))}", "everything known before iterating"),
+            (f"schurbench check {quote(str(manifest))}", "whether the factors are still what they were"),
+            (f"schurbench open {quote(str(matrix_file))}", "the same in JupyterLab, sweep by sweep"),
         ],
     )
     return INTERRUPTED if cancel.is_set() else DONE

@@ -19,7 +19,7 @@ COMMANDS = {
     "compare": "several strategies and settings side by side on one matrix",
     "export": "certified Schur factors with a manifest",
     "check": "whether saved factors still are what their manifest says",
-    "twin": "the same matrix through an independent computation",
+    "twin": "whether a job comes out differently on another kind of machine",
     "survey": "many matrices, one line each",
     "warm": "compile the kernels ahead of the first run",
     "open": "JupyterLab with the workbench on a matrix",
@@ -106,9 +106,15 @@ def build_parser() -> argparse.ArgumentParser:
     add("twin", _positional("FILE", "matrix file"), source, settings, json)
 
     survey = add(
-        "survey", _positional("SOURCE", "folder with matrix files, or a file with several"), settings, json, replace
+        "survey",
+        _positional("SOURCE", "folder or pattern of matrix files, or a file with several"),
+        settings,
+        json,
+        replace,
     )
-    survey.add_argument("-o", "--out", metavar="OUT", type=Path, required=True, help="where the table goes")
+    survey.add_argument(
+        "-o", "--out", metavar="OUT", type=Path, required=True, help="where the table goes (.csv or .json)"
+    )
 
     add("warm", json)
 

@@ -69,7 +69,9 @@ def explain(args: argparse.Namespace, console: Console) -> int:
     result = _run_of(args, console)
     diagnosis = sb.diagnose(result, try_remedies=args.try_remedies)
     if args.html is not None:
-        args.html.write_text(diagnosis.to_html(), encoding="utf-8")
+        from schurbench.cli.page import explanation_page
+
+        args.html.write_text(explanation_page(result, diagnosis), encoding="utf-8")
     if args.json:
         console.json(diagnosis.to_dict())
     else:

@@ -36,7 +36,13 @@ def main(folder: Path) -> int:
     except SchurbenchError as error:
         (folder / "report.json").write_text(json.dumps({"error": str(error)}), encoding="utf-8")
         return 2
-    np.savez(folder / "factors.npz", T=factors.T, Z=factors.Z, condition=factors.certificate().condition)
+    np.savez(
+        folder / "factors.npz",
+        T=factors.T,
+        Z=factors.Z,
+        eigenvalues=factors.eigenvalues,
+        condition=factors.certificate().condition,
+    )
     report = {
         "error": None,
         "sha256": matrix.sha256,

@@ -208,7 +208,7 @@ def twin(
         factors = []
         for folder in folders:
             with np.load(folder / "factors.npz", allow_pickle=False) as archive:
-                factors.append({name: archive[name] for name in ("T", "Z", "condition")})
+                factors.append({name: archive[name] for name in ("T", "Z", "eigenvalues", "condition")})
     return _confront(m, [_THIS_MACHINE, changed], reports, factors)
 
 
@@ -266,11 +266,8 @@ def _confront(
     reports: list[dict[str, Any]],
     factors: list[dict[str, npt.NDArray[Any]]],
 ) -> Twin:
-    from schurbench.factors.triangular import eigenvalues_of
-
     one, two = factors
-    form = reports[0]["settings"]["form"]
-    values = [eigenvalues_of(pair["T"], form) for pair in factors]
+    values = [pair["eigenvalues"] for pair in factors]
     distance = np.full(m.n, np.nan)
     if all(np.isfinite(spectrum).all() for spectrum in values):
         distance = pair_spectra(values[0], values[1])[1]

@@ -7,7 +7,7 @@ about 1e-16 that it holds to rounding.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import Any, Literal, cast
 
 import numpy as np
 import numpy.typing as npt
@@ -41,12 +41,12 @@ def times_power_of_two(a: Array, exponent: int | npt.NDArray[np.int64]) -> Array
     # ldexp takes a C int; beyond ±2200 every double is 0 or infinite anyway.
     steps = np.clip(shift, -2200, 2200).astype(np.intc)
     with np.errstate(under="ignore", over="ignore"):
-        return np.ldexp(parts, steps[:, None] if steps.ndim else steps).view(a.dtype)
+        return cast(Array, np.ldexp(parts, steps[:, None] if steps.ndim else steps).view(a.dtype))
 
 
 def scaled(a: Array) -> tuple[Array, int]:
     """The array brought to a largest part in [1/2, 1) by an exact power of two, and that exponent."""
-    rows: Array = np.ascontiguousarray(a)
+    rows = cast(Array, np.ascontiguousarray(a))
     exponent = power_of_two_exponent(rows)
     return times_power_of_two(a, exponent), exponent
 

@@ -1,0 +1,301 @@
+"""The evidence every cause draws on, worked out once for a run and only when a cause asks for it."""
+
+from __future__ import annotations
+
+import itertools
+from dataclasses import dataclass
+from functools import cached_property
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from schurbench.diagnosis.figures import HealthyFigures, healthy_figures
+from schurbench.journal import Deflation, DeflationKind, StopReason
+from schurbench.prepare.profile import Profile, profile_of
+
+if TYPE_CHECKING:
+    from schurbench.journal import Run
+
+__all__ = ["Case", "Decay", "Stretch"]
+
+Real = npt.NDArray[np.float64]
+Complex = npt.NDArray[np.complex128]
+
+#: States looked at in one stretch; more would cost time and change no slope.
+_SAMPLES = 160
+
+#: Stretches examined in one run, the longest first.
+_EXAMINED = 6
+
+#: Share of the run, and least seconds, that the diagnosis may cost; eigenvalues of an unfinished window are only
+#: computed when they are expected to fit in (LAPACK needs about 1.2e-9·n³ s for them without vectors, real form, on
+#: the machine of `schurbench.prepare.estimate`, and 4 times that in complex form).
+_SHARE, _LEAST = 0.05, 0.05
+_EIGENVALUES_COST = {"real": 1.2e-9, "complex": 5e-9}
+
+
+@dataclass(frozen=True, slots=True)
+class Stretch:
+    """Consecutive sweeps on one window without a deflation, the last of them the one that ended it.
+
+    Attributes
+    ----------
+    first, last : int
+        Steps, both included.
+    window : (int, int)
+        Active window, half-open.
+    end : Deflation or None
+        What ended it; None when the run stopped first.
+    """
+
+    first: int
+    last: int
+    window: tuple[int, int]
+    end: Deflation | None
+
+    @property
+    def length(self) -> int:
+        """Sweeps."""
+        return self.last - self.first + 1
+
+    @property
+    def rows(self) -> int:
+        """Rows of the window."""
+        return self.window[1] - self.window[0]
+
+
+@dataclass(frozen=True, slots=True)
+class Decay:
+    """How one subdiagonal entry fell over a stretch, measured and predicted.
+
+    Attributes
+    ----------
+    row : int
+        The entry is h[row, row−1].
+    measured, predicted : float
+        Factor by which it shrinks in one sweep.
+    straightness : float
+        Share of the variation of log|h| that a straight line explains, 0 to 1.
+    magnitude : float
+        |h| at the end of the stretch, before it was set to zero.
+    """
+
+    row: int
+    measured: float
+    predicted: float
+    straightness: float
+    magnitude: float
+
+
+class Case:
+    """A run with everything the causes ask about it."""
+
+    def __init__(self, run: Run) -> None:
+        self.run = run
+
+    @cached_property
+    def healthy(self) -> HealthyFigures:
+        """What the run is held against."""
+        return healthy_figures(self.run)
+
+    @cached_property
+    def profile(self) -> Profile:
+        """Profile of the loaded matrix, without the departure from normality, which would cost a Schur form."""
+        return profile_of(self.run.matrix, exact_departure=False)
+
+    @cached_property
+    def real_entries(self) -> bool:
+        """Whether every entry of the matrix is real, whatever its type."""
+        return self.run.matrix.is_real or not bool(np.any(self.run.matrix.array.imag))
+
+    @cached_property
+    def stretches(self) -> tuple[Stretch, ...]:
+        """Every stretch of sweeps between two deflations, in order."""
+        found: list[Stretch] = []
+        first: int | None = None
+        for step in self.run.steps:
+            if not step.shifts:
+                continue
+            if first is None:
+                first = step.index
+            after = [d for d in step.deflations if not d.before_sweep]
+            if after:
+                found.append(Stretch(first, step.index, step.window, after[0]))
+                first = None
+        if first is not None:
+            last = self.run.steps[-1]
+            found.append(Stretch(first, last.index, last.window, None))
+        return tuple(found)
+
+    @cached_property
+    def longest_wait(self) -> int:
+        """Longest stretch, in sweeps."""
+        return max((stretch.length for stretch in self.stretches), default=0)
+
+    @cached_property
+    def deflated(self) -> int:
+        """Rows of H in final form."""
+        return sum(d.size for d in self.run.deflations if d.kind is not DeflationKind.SPLIT)
+
+    @cached_property
+    def in_trouble(self) -> bool:
+        """Whether the iteration waited longer, or needed more sweeps, than healthy ones do."""
+        if self.longest_wait >= self.healthy.trouble_wait:
+            return True
+        # What is left has to be counted out, or a run that was stopped early would look slow or quick by accident.
+        return self.run.sweeps > self.healthy.most_sweeps(self.deflated) + self._last_wait
+
+    @property
+    def _last_wait(self) -> int:
+        last = self.stretches[-1] if self.stretches else None
+        return last.length if last is not None and last.end is None else 0
+
+    @cached_property
+    def troubled(self) -> tuple[Stretch, ...]:
+        """The stretches to explain, longest first: none in a healthy run."""
+        if not self.in_trouble:
+            return ()
+        floor = self.healthy.trouble_wait
+        if self.longest_wait < floor:
+            # No single stretch is to blame, so the longer half of the ordinary ones has to do.
+            floor = max(4, self.longest_wait // 2)
+        long = sorted((s for s in self.stretches if s.length >= floor), key=lambda s: -s.length)
+        return tuple(long[:_EXAMINED])
+
+    @cached_property
+    def stopped_early(self) -> bool:
+        """Whether the run ended without having converged."""
+        return self.run.stop.reason is not StopReason.CONVERGED
+
+    @cached_property
+    def eigenvalues(self) -> Complex:
+        """Eigenvalues of H in row order, in working units.
+
+        Final ones as they deflated, those of unfinished blocks by LAPACK; NaN in an unfinished block so large that its
+        eigenvalues would cost more than the diagnosis may.
+        """
+        import scipy.linalg
+
+        last = len(self.run.steps)
+        values = self.run.ritz(last)
+        if self.run.converged:
+            return values
+        H = self.run.state(last).H
+        cuts = np.flatnonzero(np.diagonal(H, -1) == 0.0) + 1
+        edges = [0, *(int(c) for c in cuts), self.run.n]
+        allowed = max(_LEAST, _SHARE * self.run.seconds) / _EIGENVALUES_COST[self.run.settings.form]
+        for lo, hi in itertools.pairwise(edges):
+            if hi - lo > 1:
+                fits = (hi - lo) ** 3 <= allowed
+                values[lo:hi] = scipy.linalg.eigvals(H[lo:hi, lo:hi], check_finite=False) if fits else np.nan
+        return values
+
+    def known(self, stretch: Stretch) -> bool:
+        """Whether the eigenvalues of the window of a stretch are known."""
+        lo, hi = stretch.window
+        return not bool(np.isnan(self.eigenvalues[lo:hi]).any())
+
+    def sampled_steps(self, stretch: Stretch) -> npt.NDArray[np.int64]:
+        """Steps of the later part of a stretch, at most 160, evenly spaced; transients at its start are left out."""
+        first = stretch.first + stretch.length // 4
+        last = stretch.last if stretch.end is None else max(stretch.last - 1, first)
+        count = min(_SAMPLES, last - first + 1)
+        return np.unique(np.linspace(first, last, count).astype(np.int64))
+
+    def shifts(self, stretch: Stretch) -> Complex:
+        """Shifts of the sampled steps, shape (steps, shifts a sweep); missing ones of shorter sweeps are NaN."""
+        steps = self.run.steps
+        chosen = [steps[int(k) - 1].shifts for k in self.sampled_steps(stretch)]
+        width = max(len(s) for s in chosen)
+        out = np.full((len(chosen), width), np.nan, dtype=np.complex128)
+        for i, s in enumerate(chosen):
+            out[i, : len(s)] = s
+        return out
+
+    def gains(self, stretch: Stretch) -> Real:
+        """Mean of log|p(λ)| over the sampled sweeps for every eigenvalue of the window, in row order.
+
+        p is the shift polynomial of a sweep. After many sweeps the window holds the product of all p, as in a power
+        iteration; with the gains sorted upwards, |h[hi−m, hi−m−1]| then shrinks by exp(gains[m−1] − gains[m]) a sweep,
+        because the m smallest separate from the rest (Watkins, "Understanding the QR algorithm", SIAM Review 24, 1982,
+        cited from memory).
+        """
+        lo, hi = stretch.window
+        shifts = self.shifts(stretch)
+        values = self.eigenvalues[lo:hi]
+        floor = np.finfo(np.float64).tiny
+        total = np.zeros((shifts.shape[0], values.size))
+        for column in range(shifts.shape[1]):
+            shift = shifts[:, column]
+            used = ~np.isnan(shift)
+            total[used] += np.log(np.maximum(np.abs(values[None, :] - shift[used, None]), floor))
+        return np.asarray(total.mean(axis=0))
+
+    def bands(self, stretch: Stretch) -> npt.NDArray[Any]:
+        """Diagonal, signed subdiagonal and superdiagonal after the sampled steps, shape (steps, 3, n)."""
+        return np.stack([np.asarray(self.run.journal.bands(int(k))) for k in self.sampled_steps(stretch)])
+
+    def decay(self, stretch: Stretch) -> Decay | None:
+        """How the entry that a stretch waits for falls; None when the stretch is too short or nothing is known of it.
+
+        The entry is the one that deflated at the end; in an unfinished stretch the one the shifts should separate
+        best.
+        """
+        steps = self.sampled_steps(stretch)
+        lo, hi = stretch.window
+        if steps.size < 4 or hi - lo < 2 or not self.known(stretch):
+            return None
+        gains = np.sort(self.gains(stretch))
+        steps_down = gains[:-1] - gains[1:]  # [m−1]: log of the factor for h[hi−m, hi−m−1]
+        if stretch.end is not None:
+            row = stretch.end.row
+        else:
+            row = hi - 1 - int(np.argmin(steps_down))
+        if not lo < row < hi:
+            return None
+        magnitudes = np.abs(self.bands(stretch)[:, 1, row - 1])
+        if not magnitudes.all():
+            return None
+        level = np.log(magnitudes)
+        x = steps - steps.mean()
+        y = level - level.mean()
+        slope = float(x @ y) / float(x @ x)
+        variation = float(y @ y)
+        straight = slope * float(x @ y) / variation if variation > 0.0 else 1.0
+        return Decay(
+            row=row,
+            measured=float(np.exp(slope)),
+            predicted=float(np.exp(steps_down[hi - row - 1])),
+            straightness=min(1.0, straight),
+            magnitude=float(magnitudes[-1]),
+        )
+
+    def participation(self, rows: tuple[int, int], most: int = 3) -> tuple[tuple[str, float], ...]:
+        """The states of the matrix that carry most of a range of rows of H, with their shares.
+
+        Empty where the source names no states, where Z was not accumulated, or where the rows are more than half of
+        H, so that every state takes part. Later sweeps mix the columns of Z inside a window only, so the final Z
+        says what the window consisted of at the time.
+        """
+        lo, hi = rows
+        matrix = self.run.matrix
+        if matrix.labels is None or not self.run.settings.accumulate or not 0 < hi - lo <= self.run.n // 2:
+            return ()
+        Z = self._final_vectors
+        if Z is None:
+            return ()
+        shares = (np.abs(Z[:, lo:hi]) ** 2).sum(axis=1) / (hi - lo)
+        order = np.argsort(-shares)[:most]
+        return tuple((matrix.label(int(i)), float(shares[i])) for i in order if shares[i] >= 0.05)
+
+    @cached_property
+    def _final_vectors(self) -> npt.NDArray[Any] | None:
+        return self.run.state(len(self.run.steps)).Z
+
+    def carriers(self, rows: tuple[int, int]) -> str:
+        """A half-sentence that names these states, empty where there is nothing to name."""
+        found = self.participation(rows)
+        if not found:
+            return ""
+        return "; these rows belong mostly to " + ", ".join(f"{name} ({100 * share:.0f} %)" for name, share in found)

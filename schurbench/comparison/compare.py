@@ -34,8 +34,10 @@ __all__ = [
 #: matrix of any size run into the limit, ``given`` needs shifts, ``auto`` is one of the others.
 DEFAULT_ENTRIES = ("francis", "wilkinson", "rayleigh")
 
-#: Seconds closer than this share of the fastest are one and the same: repeated runs on an idle machine differ as much.
-_SAME_TIME = 0.10
+#: Seconds closer than this share of the fastest, or than this many, are one and the same: repeated runs of one setting
+#: differ as much.
+_SAME_SHARE = 0.10
+_SAME_SECONDS = 0.01
 
 _NOT_RUN = "not run: the comparison was cancelled"
 
@@ -150,15 +152,15 @@ class Comparison:
         """The entry to take, or None when none converged with factors that pass.
 
         Of the entries that converged and whose certificate passed (or that were asked not to accumulate Z), the
-        fastest; entries within 10 % of its time count as equally fast, and of these the one with the fewest sweeps is
-        taken, then the one asked for first. Seconds are measured, so two close entries may change places when the
-        comparison is repeated.
+        fastest; entries within 10 % or 10 ms of its time count as equally fast, and of these the one with the fewest
+        sweeps is taken, then the one asked for first. Seconds are measured, so two close entries may change places
+        when the comparison is repeated.
         """
         sound = [entry for entry in self.entries if _is_sound(entry)]
         if not sound:
             return None
         fastest = min(_figures(entry).seconds for entry in sound)
-        level = [entry for entry in sound if _figures(entry).seconds <= fastest * (1.0 + _SAME_TIME)]
+        level = [entry for entry in sound if _figures(entry).seconds <= fastest * (1.0 + _SAME_SHARE) + _SAME_SECONDS]
         return min(level, key=lambda entry: _figures(entry).sweeps)
 
     @property
@@ -169,8 +171,8 @@ class Comparison:
             return "None of the entries converged with factors that pass; the diagnosis of their runs says why."
         figures = _figures(best)
         return (
-            f"{best.label} is preferred: of the entries that converged and passed it was the fastest, with "
-            f"{figures.sweeps} sweeps in {number(figures.seconds)} s."
+            f"{best.label} is preferred: of the entries that converged and passed it was the fastest, or as "
+            f"fast with fewer sweeps: {figures.sweeps} sweeps in {number(figures.seconds)} s."
         )
 
     def table(self) -> Any:

@@ -96,7 +96,8 @@ class Factors:
 
     def __post_init__(self) -> None:
         for name in ("T", "Z"):
-            array = np.array(getattr(self, name), order="C")
+            # Adding 0 strips the sign off zeros, which some readers of Matrix Market files drop: same bytes everywhere.
+            array = np.array(getattr(self, name) + 0.0, order="C")
             array.setflags(write=False)
             object.__setattr__(self, name, array)
         values = eigenvalues_of(self.T, self.form)

@@ -140,7 +140,7 @@ def widen(values: npt.NDArray[Any], what: str) -> tuple[Dense, tuple[str, ...]]:
                 f"{what} holds the integer {worst}, beyond 2**53, where float64 cannot hold every integer; "
                 f"divide it by a power of two or convert it to float64 yourself if rounding is acceptable"
             )
-    # The view turns an explicit byte order that happens to be the machine's into the type every later room compares with.
+    # The view turns an explicit byte order that is the machine's own into the type that later rooms compare with.
     wide: Dense = (
         values.astype(np.complex128, copy=False).view(np.complex128)
         if kind == "c"

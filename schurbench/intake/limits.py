@@ -10,8 +10,8 @@ from schurbench.errors import InputError
 __all__ = ["available_bytes", "readable_size", "require_memory", "require_room", "run_bytes"]
 
 ARRAYS_IN_A_RUN = 10
-"""Dense n × n arrays' worth of memory at the peak of a run, its recorded bands included and the checkpoints of its history
-left out. Measured with tracemalloc at n = 400 with ``keep="1 MiB"``: 10.2 in real arithmetic and 9.6 in complex."""
+"""Dense n × n arrays' worth of memory at the peak of a run, with its recorded bands and without the checkpoints of its
+history. Measured with tracemalloc at n = 400 with ``keep="1 MiB"``: 10.2 in real arithmetic and 9.6 in complex."""
 
 ASSUMED_BYTES = 4 * 2**30
 """Taken as the memory of a machine that does not tell: small enough to be safe on a present-day laptop."""

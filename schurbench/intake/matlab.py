@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 
 from schurbench.errors import InputError
-from schurbench.intake.checks import Found, one_line, require_square
+from schurbench.intake.checks import Found, one_line, require_square, widen
 from schurbench.intake.choose import Candidate, choose
 from schurbench.intake.limits import require_memory, require_room
 
@@ -54,6 +54,7 @@ def _read_classic(path: Path, key: str | None, what: str) -> Found:
         for name, shape, sort in listed
         if name != "__function_workspace__"  # where MATLAB keeps what anonymous functions refer to
     ]
+    sort_of = {str(name): str(sort) for name, _, sort in listed}
     chosen, notes = choose(candidates, key, what)
     candidate = next(c for c in candidates if c.name == chosen)
     label = f"{one_line(chosen)} in {what}"
@@ -65,9 +66,17 @@ def _read_classic(path: Path, key: str | None, what: str) -> Found:
     require_room(n, is_complex=False, what=label)
     _check_expanded_size(path, what)
     try:
-        values = loadmat(path, variable_names=[chosen], mat_dtype=True)[chosen]
+        values = loadmat(path, variable_names=[chosen])[chosen]
     except Exception as error:
         raise _damaged(what, error) from error
+    # MATLAB packs whole numbers of its floating classes into the shortest integer type: that is not the matrix's type.
+    # (scipy's own mat_dtype=True would unpack them, but drops imaginary parts; scipy 1.17.1.)
+    if sort_of[chosen] == "double":
+        values, _ = widen(values, label)
+    elif sort_of[chosen] == "single":
+        values = values.astype(np.complex64 if values.dtype.kind == "c" else np.float32)
+    elif sort_of[chosen] == "logical":
+        values = values != 0
     return Found(values, key=chosen, notes=notes)
 
 

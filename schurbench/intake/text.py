@@ -23,6 +23,8 @@ _COMPLEX = re.compile(
     re.IGNORECASE | re.ASCII,
 )
 _NUMBER_LIKE = re.compile(r"[+-]?\d[\d.,' ]*(?:[eE][+-]?\d+)?", re.ASCII)
+_LONG_ROW = 100_000
+_FIELD = re.compile(r"\S+")
 _COMMENTS = ("#", "%")
 
 
@@ -83,9 +85,10 @@ def _rows(path: Path, what: str) -> Iterator[tuple[int, list[str]]]:
             if not sniffed:
                 separator = next((mark for mark in ";\t," if mark in line), None)
                 sniffed = True
-                # A single line of a square matrix already tells its order.
-                columns = stripped.count(separator) + 1 if separator else len(stripped.split(maxsplit=1 << 20))
-                require_room(max(columns - 1, 1), is_complex=False, what=what)
+                # A very long first line is measured before it is cut into pieces.
+                columns = stripped.count(separator) + 1 if separator else sum(1 for _ in _FIELD.finditer(stripped))
+                if columns > _LONG_ROW:
+                    require_room(columns - 1, is_complex=False, what=what)
             if separator is None:
                 yield number, stripped.split()
             else:
@@ -148,7 +151,7 @@ def _is_number(field: str) -> bool:
 
 
 def _is_header(row: list[str], after: list[str] | None) -> bool:
-    """Whether the first row holds names: no number after its first field, or an empty corner over numbers."""
+    """Whether the first row holds names: nothing but names, or an empty corner over numbers."""
     if len(row) == 1:
         return not _is_number(row[0]) and after is not None
     if after is not None and len(after) == len(row) + 1:
@@ -157,7 +160,7 @@ def _is_header(row: list[str], after: list[str] | None) -> bool:
         return after is not None and len(after) == len(row)
     body = row[1:-1] if row[-1] == "" and len(row) > 2 else row[1:]
     # A field such as 1,5 or 3 m/s in a row of numbers is a mistake to report, not a name.
-    return not any(_is_number(field) for field in body)
+    return not any(_is_number(field) for field in [row[0], *body])
 
 
 def _has_index(header: list[str] | None, row: list[str]) -> int:
@@ -238,9 +241,8 @@ def _float(text: str) -> float:
 
 
 def _check_integer(field: str, line: int, what: str) -> None:
-    if abs(int(field)) > EXACT_INTEGER:
+    if int(float(field)) != int(field):
         raise InputError(
-            f"{what} holds the integer {field[:30]} at line {line}, beyond 2**53, where float64 cannot hold "
-            "every integer; "
-            f"write it with a decimal point if rounding is acceptable"
+            f"{what} holds the integer {field[:30]} at line {line}, which float64 cannot hold exactly; write it with a "
+            "decimal point if rounding is acceptable"
         )

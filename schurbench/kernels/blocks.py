@@ -8,14 +8,14 @@ import numpy as np
 
 from schurbench.kernels._jit import compiled
 
-__all__ = ["copy_bands", "scan_up", "standardise_pair"]
+__all__ = ["copy_bands", "deflation_threshold", "scan_up", "standardise_pair"]
 
 ULP = 2.0**-52
 TINY = 2.0**-1022 / ULP  # below this an entry has lost digits to underflow and carries no information
 
 
 @compiled
-def _threshold(H, k, test, tol, norm):
+def deflation_threshold(H, k, test, tol, norm):
     """Largest |h[k, k−1]| that the deflation test accepts; test 0 neighbour, 1 ahues-tisseur, 2 norm; tol < 0 for default.
 
     Neighbour: Wilkinson's |h| ≤ ulp (|h₁₁| + |h₂₂|) (Golub & Van Loan, 4th ed., §7.5.1). Ahues–Tisseur: additionally
@@ -65,8 +65,8 @@ def scan_up(H, lo, hi, test, tol, norm):
     for k in range(hi - 1, lo, -1):
         magnitude = abs(H[k, k - 1])
         if magnitude == 0.0:
-            return k, 0.0, _threshold(H, k, test, tol, norm)
-        threshold = _threshold(H, k, test, tol, norm)
+            return k, 0.0, deflation_threshold(H, k, test, tol, norm)
+        threshold = deflation_threshold(H, k, test, tol, norm)
         if magnitude <= threshold:
             return k, magnitude, threshold
     return lo, 0.0, 0.0

@@ -1,0 +1,196 @@
+"""Open the workbench: a notebook of one cell, and the server that shows it. Imports no widgets."""
+
+from __future__ import annotations
+
+import json
+import os
+import subprocess
+import sys
+import tempfile
+from importlib.util import find_spec
+from pathlib import Path
+from typing import Any
+from urllib.parse import quote
+
+from schurbench.errors import InputError, SchurbenchError
+from schurbench.intake import load
+
+__all__ = ["lab_command", "lab_environment", "open_workbench", "page_command", "workbench_notebook", "write_notebook"]
+
+#: Largest message the page may send. A matrix of order 2000 is 32 MB, and uploads travel as text; the default of the
+#: server, 10 MB, drops larger ones without a word.
+MESSAGE_LIMIT = 512 << 20
+
+_ANNOUNCEMENTS = "@jupyterlab/apputils-extension:announcements"
+
+
+def workbench_notebook(file: Path | None = None, key: str | None = None) -> dict[str, Any]:
+    """The notebook that shows the workbench on a file, or on the demonstration plant.
+
+    Parameters
+    ----------
+    file : Path, optional
+    key : str, optional
+        Array in the file.
+
+    Returns
+    -------
+    dict
+        nbformat 4.5, without outputs. Path and key appear in it as escaped Python literals.
+    """
+    if file is None:
+        matrix, what = "sb.demo_matrix()", "the demonstration plant"
+    else:
+        matrix = f"sb.load({_literal(str(file))}" + (f", key={_literal(key)}" if key else "") + ")"
+        what = "your matrix"
+    words = f"Run the cell below (Shift and Enter) for the workbench on {what}; after a restart of the kernel, again."
+    return {
+        "cells": [
+            {"cell_type": "markdown", "id": "words", "metadata": {}, "source": [words]},
+            {
+                "cell_type": "code",
+                "execution_count": None,
+                "id": "workbench",
+                "metadata": {},
+                "outputs": [],
+                "source": ["import schurbench as sb\n", "\n", f"wb = sb.Workbench({matrix})\n", "wb"],
+            },
+        ],
+        "metadata": {
+            "kernelspec": {"display_name": "Python 3 (ipykernel)", "language": "python", "name": "python3"},
+            "language_info": {"name": "python"},
+        },
+        "nbformat": 4,
+        "nbformat_minor": 5,
+    }
+
+
+def _literal(text: str) -> str:
+    """A Python string literal in plain ASCII, whatever the text holds."""
+    return ascii(text)
+
+
+def write_notebook(notebook: dict[str, Any], folder: Path, stem: str) -> Path:
+    """Write a notebook under a name that is free; one that holds the same already is used as it is.
+
+    Raises
+    ------
+    OSError
+        The folder cannot be written to.
+    """
+    text = json.dumps(notebook, indent=1, ensure_ascii=False) + "\n"
+    for attempt in range(1, 1000):
+        path = folder / (f"{stem}.ipynb" if attempt == 1 else f"{stem}-{attempt}.ipynb")
+        try:
+            with path.open("x", encoding="utf-8") as out:
+                out.write(text)
+            return path
+        except FileExistsError:
+            if path.is_file() and path.read_bytes() == text.encode("utf-8"):
+                return path
+    raise InputError(f"{folder} holds 1000 notebooks named {stem} already; remove some")
+
+
+def lab_command(notebook: Path, *, browser: bool = True, extra: tuple[str, ...] = ()) -> list[str]:
+    """The command that serves one notebook in JupyterLab: this machine only, with a token, asking nothing outside."""
+    return [
+        sys.executable,
+        "-m",
+        "jupyterlab",
+        "--ServerApp.ip=127.0.0.1",
+        f"--ServerApp.root_dir={notebook.parent}",
+        f"--LabApp.default_url=/lab/tree/{quote(notebook.name)}",
+        f"--ServerApp.tornado_settings={{'websocket_max_message_size': {MESSAGE_LIMIT}}}",
+        "--LabApp.news_url=None",
+        "--LabApp.check_for_updates_class=jupyterlab.NeverCheckForUpdate",
+        "--LabApp.extension_manager=readonly",
+        "--ServerApp.answer_yes=True",
+        *(() if browser else ("--no-browser",)),
+        *extra,
+    ]
+
+
+def page_command(notebook: Path, *, browser: bool = True) -> list[str]:
+    """The command that serves one notebook as a plain page through Voilà: this machine only, with a token."""
+    return [
+        sys.executable,
+        "-m",
+        "voila",
+        str(notebook),
+        "--Voila.ip=127.0.0.1",
+        "--auto-token",
+        f"--Voila.tornado_settings={{'websocket_max_message_size': {MESSAGE_LIMIT}}}",
+        *(() if browser else ("--no-browser",)),
+    ]
+
+
+def lab_environment(folder: Path) -> dict[str, str]:
+    """The environment for `lab_command`; ``folder`` receives the setting that keeps news banners off the page."""
+    settings = folder / "labconfig"
+    settings.mkdir(parents=True, exist_ok=True)
+    (settings / "page_config.json").write_text(
+        json.dumps({"disabledExtensions": {_ANNOUNCEMENTS: True}}), encoding="utf-8"
+    )
+    paths = [str(folder), *filter(None, [os.environ.get("JUPYTER_CONFIG_PATH")])]
+    return {**os.environ, "JUPYTER_CONFIG_PATH": os.pathsep.join(paths)}
+
+
+def open_workbench(
+    file: Path | None = None, *, key: str | None = None, page: bool = False, browser: bool = True
+) -> int:
+    """Serve the workbench until the user stops the server.
+
+    Parameters
+    ----------
+    file : Path, optional
+        Matrix file; the demonstration plant without it.
+    key : str, optional
+        Array in the file.
+    page : bool
+        A plain page through Voilà instead of JupyterLab.
+    browser : bool
+        Whether to open a browser window on it.
+
+    Returns
+    -------
+    int
+        Exit code of the server.
+
+    Raises
+    ------
+    InputError
+        The file holds no matrix that can be loaded.
+    SchurbenchError
+        JupyterLab, or for a page Voilà, is not installed.
+    """
+    wanted = {"voila" if page else "jupyterlab": None, "ipywidgets": None, "bqplot": None}
+    missing = [name for name in wanted if find_spec(name) is None]
+    if missing:
+        extra = " voila" if "voila" in missing else ""
+        raise SchurbenchError(
+            f"{' and '.join(missing)} not found; to open the workbench, run: pip install 'schurbench[workbench]'{extra}"
+        )
+    stem = "schurbench_demo"
+    if file is not None:
+        stem = f"{_plain_stem(load(file, key).name)}_workbench"
+        file = Path(file).resolve()
+    notebook = workbench_notebook(file, key)
+    with tempfile.TemporaryDirectory(prefix="schurbench-") as scratch:
+        try:
+            written = write_notebook(notebook, Path.cwd(), stem)
+        except OSError:
+            # a folder that cannot be written to is no reason not to work; the notebook goes with the server
+            written = write_notebook(notebook, Path(scratch), stem)
+        print(f"Workbench notebook: {written}. Stop the server with Ctrl+C.", file=sys.stderr)
+        command = page_command(written, browser=browser) if page else lab_command(written, browser=browser)
+        server = subprocess.Popen(command, env=lab_environment(Path(scratch) / "settings"))
+        while True:
+            try:
+                return server.wait()
+            except KeyboardInterrupt:
+                continue  # the server received it too and closes its kernels first
+
+
+def _plain_stem(name: str) -> str:
+    kept = "".join(c if c.isascii() and (c.isalnum() or c in "-_") else "_" for c in name).strip("_")
+    return kept[:60] or "matrix"

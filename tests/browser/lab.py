@@ -1,0 +1,131 @@
+"""A JupyterLab server and a page of Chromium on it, for the browser tests."""
+
+from __future__ import annotations
+
+import contextlib
+import os
+import secrets
+import signal
+import socket
+import subprocess
+import time
+import urllib.request
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any
+
+from schurbench.panels.serve import lab_command, lab_environment
+
+#: Software drawing, no background traffic.
+CHROMIUM_ARGUMENTS = [
+    "--no-sandbox",
+    "--disable-dev-shm-usage",
+    "--disable-gpu-compositing",
+    "--use-gl=angle",
+    "--use-angle=swiftshader",
+    "--enable-unsafe-swiftshader",
+    "--disable-background-networking",
+    "--disable-component-update",
+]
+
+_NOTEBOOK_READY = """
+() => {
+  const app = window.jupyterapp;
+  const panel = app && app.shell.currentWidget;
+  const session = panel && panel.sessionContext && panel.sessionContext.session;
+  return !!(session && session.kernel && session.kernel.connectionStatus === 'connected'
+            && session.kernel.status === 'idle');
+}
+"""
+
+
+@contextlib.contextmanager
+def lab_server(notebook: Path, scratch: Path) -> Iterator[str]:
+    """Serve a notebook as ``schurbench open`` does, on a port of its own; yields the address of the notebook."""
+    with socket.socket() as probe:
+        probe.bind(("127.0.0.1", 0))
+        port = probe.getsockname()[1]
+    token = secrets.token_hex(16)
+    extra = (
+        f"--ServerApp.port={port}",
+        "--ServerApp.port_retries=0",
+        f"--IdentityProvider.token={token}",
+        "--LabApp.expose_app_in_browser=True",
+        "--allow-root",
+    )
+    environment = lab_environment(scratch / "settings") | {
+        "JUPYTER_CONFIG_DIR": str(scratch / "config"),
+        "JUPYTER_RUNTIME_DIR": str(scratch / "runtime"),
+        "PYTHONUNBUFFERED": "1",
+    }
+    environment.pop("JUPYTER_TOKEN", None)
+    log = (scratch / "server.log").open("w", encoding="utf-8")
+    server = subprocess.Popen(
+        lab_command(notebook, browser=False, extra=extra),
+        env=environment,
+        stdout=log,
+        stderr=subprocess.STDOUT,
+        cwd=notebook.parent,
+        start_new_session=True,
+    )
+    try:
+        base = f"http://127.0.0.1:{port}"
+        _wait_for(f"{base}/api/status?token={token}", server, scratch / "server.log")
+        yield f"{base}/lab/tree/{notebook.name}?reset&token={token}"
+    finally:
+        server.send_signal(signal.SIGINT)
+        try:
+            server.wait(15)
+        except subprocess.TimeoutExpired:
+            os.killpg(server.pid, signal.SIGKILL)
+            server.wait(15)
+        log.close()
+
+
+def _wait_for(address: str, server: subprocess.Popen[bytes], log: Path) -> None:
+    until = time.monotonic() + 60.0
+    while time.monotonic() < until:
+        if server.poll() is not None:
+            break
+        with contextlib.suppress(OSError), urllib.request.urlopen(address, timeout=5) as answer:
+            if answer.status == 200:
+                return
+        time.sleep(0.2)
+    raise AssertionError("the server did not start:\n" + log.read_text(encoding="utf-8")[-2000:])
+
+
+@contextlib.contextmanager
+def chromium_page(chromium: str, width: int, height: int) -> Iterator[tuple[Any, list[str]]]:
+    """A page, and the list in which every address it asks for outside this machine is noted."""
+    from playwright.sync_api import sync_playwright
+
+    outside: list[str] = []
+
+    def noted(request: Any) -> None:
+        if not request.url.startswith(("http://127.0.0.1:", "ws://127.0.0.1:", "data:", "blob:", "about:")):
+            outside.append(request.url)
+
+    with sync_playwright() as playwright:
+        browser = playwright.chromium.launch(executable_path=chromium, args=CHROMIUM_ARGUMENTS)
+        try:
+            page = browser.new_page(viewport={"width": width, "height": height})
+            page.on("request", noted)
+            yield page, outside
+        finally:
+            browser.close()
+
+
+def open_notebook(page: Any, address: str) -> None:
+    """Go to a notebook, wait for its kernel, and make room for it."""
+    page.goto(address)
+    page.wait_for_function(_NOTEBOOK_READY, timeout=60_000)
+    page.evaluate("() => window.jupyterapp.shell.collapseLeft()")
+
+
+def run_all(page: Any) -> None:
+    page.evaluate("() => window.jupyterapp.commands.execute('notebook:run-all-cells')")
+
+
+def set_theme(page: Any, theme: str) -> None:
+    page.evaluate("name => window.jupyterapp.commands.execute('apputils:change-theme', {theme: name})", theme)
+    page.wait_for_function("() => document.body.dataset.jpThemeName !== undefined")

@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 from collections.abc import Callable
 from pathlib import Path
+from textwrap import indent
 from typing import TYPE_CHECKING, Any
 
 from schurbench.cli.console import Console, figure, interruptible
@@ -13,12 +14,13 @@ from schurbench.errors import InputError, SchurbenchError, SettingsError
 
 if TYPE_CHECKING:
     from schurbench.comparison import Comparison
+    from schurbench.diagnosis import Diagnosis, Finding
     from schurbench.factors import Factors
     from schurbench.intake import WorkingMatrix
     from schurbench.journal import Run
     from schurbench.prepare import Profile
 
-__all__ = ["carry_out", "describe_run", "introduce", "tabulate"]
+__all__ = ["carry_out", "describe_run", "introduce", "tabulate", "where"]
 
 DONE, BAD_INPUT, NOT_CONVERGED, INTERRUPTED = 0, 2, 3, 130
 
@@ -77,8 +79,7 @@ def explain(args: argparse.Namespace, console: Console) -> int:
     else:
         introduce(result.matrix, console)
         describe_run(result, console)
-        console.say()
-        console.say(str(diagnosis))
+        _tell_findings(diagnosis, console)
         if args.html is not None:
             console.say(f"\nWritten to {args.html}.")
     return INTERRUPTED if result.stop.reason == "cancelled" and not _is_run(args.file) else DONE
@@ -238,6 +239,39 @@ def demo(args: argparse.Namespace, console: Console) -> int:
     from schurbench.cli.demo import tell
 
     return tell(args.out, args.n, args.replace, console)
+
+
+def _tell_findings(diagnosis: Diagnosis, console: Console) -> None:
+    """Findings with their evidence and remedies, most useful first, and the forecast."""
+    for place, finding in enumerate(diagnosis.findings, start=1):
+        console.say()
+        console.sentence(f"{place}. {finding.statement}")
+        if finding.evidence:
+            evidence = [(name.replace("_", " "), value) for name, value in finding.evidence.items()]
+            console.table(("evidence", "value"), evidence, indent=5)
+        if where(finding):
+            console.say(f"   Seen in {where(finding)}.")
+        if finding.remedy is not None:
+            console.sentence(f"   Remedy: {finding.remedy.text}")
+            console.say(indent(finding.remedy.call, "     "))
+            if finding.remedy.result is not None:
+                console.sentence(f"   Tried: {finding.remedy.result.statement}")
+    if diagnosis.forecast is not None:
+        console.say()
+        console.sentence(diagnosis.forecast.statement)
+
+
+def where(finding: Finding) -> str:
+    """Rows and steps of a finding, in words; empty where it concerns the run as a whole."""
+    parts = []
+    if finding.rows:
+        lo, hi = min(finding.rows), max(finding.rows)
+        parts.append(f"rows {lo} to {hi} of H" if hi > lo else f"row {lo} of H")
+    # Every stretch of steps is given by its first and its last.
+    stretches = [f"{first} to {last}" for first, last in zip(finding.steps[::2], finding.steps[1::2], strict=False)]
+    if stretches:
+        parts.append(f"steps {', '.join(stretches)}")
+    return ", ".join(parts)
 
 
 def tabulate(result: Comparison, console: Console) -> None:

@@ -68,7 +68,7 @@ def tell(folder: Path, n: int | None, replace: bool, console: Console) -> int:
             for finding in sb.diagnose(run).findings[:SHOWN]:
                 console.sentence(f"- {finding.statement}")
                 if finding.remedy is not None:
-                    console.sentence(f"  Try: {finding.remedy.text}")
+                    console.sentence(f"  Remedy: {finding.remedy.text}")
 
             console.say("\n4. Other strategies and settings on the same matrix")
             entries: list[str | dict[str, str]] = ["francis", {"strategy": "francis", "balance": "both"}, "wilkinson"]

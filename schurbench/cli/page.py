@@ -5,6 +5,7 @@ from __future__ import annotations
 from html import escape
 from typing import TYPE_CHECKING
 
+from schurbench.cli.commands import where
 from schurbench.cli.console import figure
 
 if TYPE_CHECKING:
@@ -53,7 +54,7 @@ def explanation_page(run: Run, diagnosis: Diagnosis) -> str:
             f"<h1>{escape(title)}</h1>",
             _table(facts),
             _waits(run),
-            *(_finding(finding, run) for finding in diagnosis.findings),
+            *(_finding(finding) for finding in diagnosis.findings),
             forecast,
             '<p class="quiet">Rows and steps are those of the Hessenberg matrix H of this run; magnitudes are in its '
             f"working units. {escape(CAUTION)}</p>",
@@ -63,20 +64,16 @@ def explanation_page(run: Run, diagnosis: Diagnosis) -> str:
     )
 
 
-def _finding(finding: Finding, run: Run) -> str:
+def _finding(finding: Finding) -> str:
     parts = [f"<h2>{escape(finding.statement)}</h2>"]
     if finding.evidence:
         parts.append(
             _table([(name.replace("_", " "), figure(value)) for name, value in finding.evidence.items()], "figure")
         )
-    where = []
-    if finding.rows:
-        where.append(f"rows {min(finding.rows)} to {max(finding.rows)} of H")
-    if finding.steps:
-        where.append(f"steps {min(finding.steps)} to {max(finding.steps)} of {len(run.steps)}")
+    place = where(finding)
     parts.append(
         f'<p class="quiet">Cause: {escape(finding.cause)}; confidence {figure(float(finding.confidence))}'
-        f"{''.join(f'; {place}' for place in where)}.</p>"
+        f"{f'; seen in {place}' if place else ''}.</p>"
     )
     if finding.remedy is not None:
         parts.append(f"<p>{escape(finding.remedy.text)}</p><pre>{escape(finding.remedy.call)}</pre>")

@@ -65,7 +65,7 @@ def _carry_out(arguments: argparse.Namespace, console: Console) -> int:
         console.fail(str(error))
         return BAD_INPUT
     except KeyboardInterrupt:
-        console.fail("interrupted before there was anything to write.")
+        console.fail("interrupted; start the command again to finish it.")
         return INTERRUPTED
     except BrokenPipeError:
         raise

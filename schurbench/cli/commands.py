@@ -5,22 +5,21 @@ from __future__ import annotations
 import argparse
 from collections.abc import Callable
 from pathlib import Path
-from textwrap import indent
 from typing import TYPE_CHECKING, Any
 
-from schurbench.cli.console import Console, figure, interruptible
+from schurbench.cli.console import Console, interruptible
 from schurbench.cli.options import SETTINGS
+from schurbench.cli.wording import describe_run, facts, introduce, tabulate, tell_findings
 from schurbench.errors import InputError, SchurbenchError, SettingsError
 
 if TYPE_CHECKING:
-    from schurbench.comparison import Comparison
-    from schurbench.diagnosis import Diagnosis, Finding
+    from threading import Event
+
     from schurbench.factors import Factors
     from schurbench.intake import WorkingMatrix
     from schurbench.journal import Run
-    from schurbench.prepare import Profile
 
-__all__ = ["carry_out", "describe_run", "introduce", "tabulate", "where"]
+__all__ = ["carry_out"]
 
 DONE, BAD_INPUT, NOT_CONVERGED, INTERRUPTED = 0, 2, 3, 130
 
@@ -43,7 +42,7 @@ def profile(args: argparse.Namespace, console: Console) -> int:
     for remark in p.remarks or ("Nothing stands out.",):
         console.sentence(remark)
     console.say()
-    console.table(("property", "value"), _facts(p))
+    console.table(("property", "value"), facts(p))
     return DONE
 
 
@@ -51,8 +50,11 @@ def run(args: argparse.Namespace, console: Console) -> int:
     """Iterate on FILE and save the run."""
     _require_free([args.out], args.replace, args.file)
     m = _load(args)
-    result = _iterate(m, args, console, accumulate=not args.no_vectors, stop_when_stalled=args.stop_when_stalled)
-    result.save(args.out, replace=args.replace)
+    with interruptible() as cancel:  # around the saving too: a late Ctrl-C must not cost the run
+        result = _iterate(
+            m, args, console, cancel, accumulate=not args.no_vectors, stop_when_stalled=args.stop_when_stalled
+        )
+        result.save(args.out, replace=args.replace)
     if args.json:
         console.json(result.to_dict())
     else:
@@ -68,7 +70,8 @@ def explain(args: argparse.Namespace, console: Console) -> int:
 
     if args.html is not None:
         _require_free([args.html], args.replace, args.file)
-    result = _run_of(args, console)
+    with interruptible() as cancel:
+        result = _run_of(args, console, cancel)
     diagnosis = sb.diagnose(result, try_remedies=args.try_remedies)
     if args.html is not None:
         from schurbench.cli.page import explanation_page
@@ -79,7 +82,7 @@ def explain(args: argparse.Namespace, console: Console) -> int:
     else:
         introduce(result.matrix, console)
         describe_run(result, console)
-        _tell_findings(diagnosis, console)
+        tell_findings(diagnosis, console)
         if args.html is not None:
             console.say(f"\nWritten to {args.html}.")
     return INTERRUPTED if result.stop.reason == "cancelled" and not _is_run(args.file) else DONE
@@ -107,12 +110,17 @@ def compare(args: argparse.Namespace, console: Console) -> int:
 
 def export(args: argparse.Namespace, console: Console) -> int:
     """Certified factors of FILE, or of the matrix in RUN."""
+    from schurbench.factors.reorder import REGIONS
+
     _require_free(_files_of(args.out), args.replace, args.file)
-    result = _run_of(args, console)
-    factors: Factors = result.factors()
-    if args.reorder is not None:
-        factors = factors.reorder(args.reorder)
-    written = factors.save(args.out, replace=args.replace)
+    if args.reorder is not None and args.reorder not in REGIONS:
+        raise SettingsError(f"there is no region {args.reorder!r} to bring first; choose {' or '.join(REGIONS)}")
+    with interruptible() as cancel:
+        result = _run_of(args, console, cancel)
+        factors: Factors = result.factors()
+        if args.reorder is not None and factors.complete:
+            factors = factors.reorder(args.reorder)
+        written = factors.save(args.out, replace=args.replace)
     certificate = factors.certificate()
     if args.json:
         console.json({"files": [str(path) for path in written], **factors.to_dict()})
@@ -121,6 +129,8 @@ def export(args: argparse.Namespace, console: Console) -> int:
         describe_run(result, console)
         for sentence in (certificate.sentence, factors.trust, *factors.notes):
             console.sentence(sentence)
+        if args.reorder is not None and not factors.complete:
+            console.sentence("T is not finished, so its eigenvalues were left in the order in which they were found.")
         console.say(f"Saved {', '.join(str(path) for path in written)}.")
     return _code(result)
 
@@ -241,63 +251,6 @@ def demo(args: argparse.Namespace, console: Console) -> int:
     return tell(args.out, args.n, args.replace, console)
 
 
-def _tell_findings(diagnosis: Diagnosis, console: Console) -> None:
-    """Findings with their evidence and remedies, most useful first, and the forecast."""
-    for place, finding in enumerate(diagnosis.findings, start=1):
-        console.say()
-        console.sentence(f"{place}. {finding.statement}")
-        if finding.evidence:
-            evidence = [(name.replace("_", " "), value) for name, value in finding.evidence.items()]
-            console.table(("evidence", "value"), evidence, indent=5)
-        if where(finding):
-            console.say(f"   Seen in {where(finding)}.")
-        if finding.remedy is not None:
-            console.sentence(f"   Remedy: {finding.remedy.text}")
-            console.say(indent(finding.remedy.call, "     "))
-            if finding.remedy.result is not None:
-                console.sentence(f"   Tried: {finding.remedy.result.statement}")
-    if diagnosis.forecast is not None:
-        console.say()
-        console.sentence(diagnosis.forecast.statement)
-
-
-def where(finding: Finding) -> str:
-    """Rows and steps of a finding, in words; empty where it concerns the run as a whole."""
-    parts = []
-    if finding.rows:
-        lo, hi = min(finding.rows), max(finding.rows)
-        parts.append(f"rows {lo} to {hi} of H" if hi > lo else f"row {lo} of H")
-    # Every stretch of steps is given by its first and its last.
-    stretches = [f"{first} to {last}" for first, last in zip(finding.steps[::2], finding.steps[1::2], strict=False)]
-    if stretches:
-        parts.append(f"steps {', '.join(stretches)}")
-    return ", ".join(parts)
-
-
-def tabulate(result: Comparison, console: Console) -> None:
-    """A comparison as a table, what failed, and the outcome."""
-    columns = ("entry", "sweeps", "per eigenvalue", "exceptional", "seconds", "backward error", "orthogonality", "stop")
-    rows = [
-        (
-            entry.label,
-            entry.figures.sweeps,
-            entry.figures.sweeps_per_eigenvalue,
-            entry.figures.exceptional_shifts,
-            entry.figures.seconds,
-            entry.figures.backward_error,
-            entry.figures.orthogonality,
-            entry.figures.stop,
-        )
-        for entry in result.entries
-        if entry.figures is not None
-    ]
-    console.table(columns, rows)
-    for entry in result.entries:
-        if entry.error is not None:
-            console.sentence(f"{entry.label} failed: {entry.error}.")
-    console.sentence(result.sentence)
-
-
 def _load(args: argparse.Namespace) -> WorkingMatrix:
     import schurbench as sb
 
@@ -318,12 +271,12 @@ def _is_run(path: Path) -> bool:
     return path.is_file() and is_run(path)
 
 
-def _run_of(args: argparse.Namespace, console: Console) -> Run:
+def _run_of(args: argparse.Namespace, console: Console, cancel: Event) -> Run:
     """The run saved in FILE|RUN, or a new one on the matrix it holds."""
     import schurbench as sb
 
     if not _is_run(args.file):
-        return _iterate(_load(args), args, console)
+        return _iterate(_load(args), args, console, cancel)
     unused = [f"--{name}" for name in ("key", "labels", *SETTINGS) if getattr(args, name, None) is not None]
     if unused:
         raise SettingsError(
@@ -332,37 +285,17 @@ def _run_of(args: argparse.Namespace, console: Console) -> Run:
     return sb.open_run(args.file)
 
 
-def _iterate(m: WorkingMatrix, args: argparse.Namespace, console: Console, **further: Any) -> Run:
+def _iterate(m: WorkingMatrix, args: argparse.Namespace, console: Console, cancel: Event, **further: Any) -> Run:
     import schurbench as sb
 
-    with interruptible() as cancel:
-        console.status("starting; the first run of all compiles its kernels, which takes up to a minute", at_once=True)
-        return sb.iterate(m, progress=console.progress(m.n), cancel=cancel, **_settings(args), **further)
+    console.status("starting; the first run of all compiles its kernels, which takes up to a minute", at_once=True)
+    return sb.iterate(m, progress=console.progress(m.n), cancel=cancel, **_settings(args), **further)
 
 
 def _code(result: Run) -> int:
     if result.stop.reason == "cancelled":
         return INTERRUPTED
     return DONE if result.converged else NOT_CONVERGED
-
-
-def introduce(m: WorkingMatrix, console: Console) -> None:
-    """Which matrix this is, and what was done to it on the way in."""
-    kind = "real" if m.is_real else "complex"
-    console.say(f"{m.name}: {kind}, n = {m.n}, from {m.source}.")
-    for note in m.notes:
-        console.sentence(note)
-
-
-def describe_run(result: Run, console: Console) -> None:
-    """What a run did and why it ended, in a sentence."""
-    from schurbench.prepare.plain import plural
-
-    s = result.settings
-    console.sentence(
-        f"{plural(result.sweeps, 'sweep')} in {figure(result.seconds)} s with strategy {s.strategy}, {s.form} form, "
-        f"balance {s.balance}, deflation test {s.deflation}: {result.stop.message}."
-    )
 
 
 def _require_free(paths: list[Path], replace: bool, source: Path | None = None) -> None:
@@ -386,28 +319,6 @@ def _files_of(out: Path) -> list[Path]:
     if layout is None:
         raise InputError(f"factors cannot be saved as {out.name!r}; end the name in one of {', '.join(FORMATS)}")
     return [*(out.with_name(f"{out.stem}{part}{out.suffix}") for part in layout.parts), Path(f"{out}{MANIFEST_SUFFIX}")]
-
-
-def _facts(p: Profile) -> list[tuple[str, str]]:
-    """The profile as a reader wants it; `--json` has every field by name."""
-    lo, hi = p.isolated
-    departure = (
-        f"{figure(p.departure_lower)} to {figure(p.departure_upper)}" if p.departure is None else figure(p.departure)
-    )
-    return [
-        ("norms (1, ∞, Frobenius)", f"{figure(p.norm_one)}, {figure(p.norm_inf)}, {figure(p.norm_frobenius)}"),
-        ("largest entry", figure(p.norm_max)),
-        ("structure to rounding", ", ".join(p.structures) or "none"),
-        ("departure from normality (Henrici, of the norm)", departure),
-        ("balancing shrinks the 1-norm", f"{figure(p.balance_factor)}-fold (balance={p.balance_choice})"),
-        ("decades between row norms, column norms", f"{figure(p.row_norm_decades)}, {figure(p.column_norm_decades)}"),
-        ("rows left after permuting", f"{hi - lo} of {p.n}"),
-        ("strongly connected components", f"{p.components}, the largest with {max(p.component_sizes)}"),
-        ("bandwidth below, above the diagonal", f"{p.lower_bandwidth}, {p.upper_bandwidth}"),
-        ("entries that are not zero", f"{figure(100.0 * p.density)} %"),
-        ("subnormal numbers", figure(p.subnormal)),
-        ("estimated run", f"{figure(p.seconds_estimate)} s, {figure(p.memory_estimate / 2**20)} MiB"),
-    ]
 
 
 _COMMANDS: dict[str, Callable[[argparse.Namespace, Console], int]] = {

@@ -30,8 +30,8 @@ def tell(folder: Path, n: int | None, replace: bool, console: Console) -> int:
     import numpy as np
 
     import schurbench as sb
-    from schurbench.cli.commands import describe_run, introduce, tabulate
     from schurbench.cli.console import interruptible
+    from schurbench.cli.wording import describe_run, introduce, tabulate
     from schurbench.factors import check_manifest
 
     if folder.exists() and not folder.is_dir():

@@ -5,8 +5,8 @@ from __future__ import annotations
 from html import escape
 from typing import TYPE_CHECKING
 
-from schurbench.cli.commands import where
 from schurbench.cli.console import figure
+from schurbench.cli.wording import where
 
 if TYPE_CHECKING:
     from schurbench.diagnosis import Diagnosis, Finding

@@ -251,9 +251,9 @@ def test_separation_estimates_the_smallest_singular_value() -> None:
 
 
 def test_separation_says_why_it_is_missing() -> None:
-    sep, reason = separations(np.eye(200), "real")
+    sep, reason = separations(np.eye(251), "real")
     assert np.isnan(sep).all()
-    assert "n > 150" in reason
+    assert "n > 250" in reason
     assert "no other eigenvalue" in separations(np.ones((1, 1)), "real")[1]
 
 
@@ -339,6 +339,17 @@ def test_partial_factors_hold_and_say_what_is_missing(data: Path) -> None:
     with pytest.raises(sb.SettingsError, match="only finished factors can be reordered"):
         factors.reorder("left-half-plane")
     json.dumps(factors.to_dict(), allow_nan=False)
+
+
+def test_a_last_block_is_solved_directly_and_that_is_said() -> None:
+    # One sweep is allowed and nothing but a 2×2 block is left to do in complex arithmetic.
+    a = np.array([[1.0, 2.0], [3.0, 4.0]])
+    run = sb.iterate(a, strategy="zero", form="complex", limit=1)
+    assert not run.converged
+    factors = run.factors()
+    assert factors.complete
+    assert factors.certificate().passed
+    assert factors.notes == ("1 2×2 block left by the stopped run solved directly.",)
 
 
 @pytest.mark.parametrize("limit", [1, 40])

@@ -26,10 +26,11 @@ from schurbench.prepare.plain import number, plain
 
 __all__ = ["OTHER_MACHINE", "Twin", "TwinJob", "twin"]
 
-#: Oldest kernel that OpenBLAS builds carry for each processor family (OpenBLAS, TargetList.txt).
-_OLD_KERNELS = {"x86_64": "Prescott", "amd64": "Prescott", "aarch64": "ARMV8", "arm64": "ARMV8"}
+#: An early kernel of each processor family, without the wide vectors and fused operations of later ones; the names are
+#: OpenBLAS's own (TargetList.txt).
+_OLD_KERNELS = {"x86_64": "Nehalem", "amd64": "Nehalem", "aarch64": "ARMV8", "arm64": "ARMV8"}
 
-#: Conditions of the second job: kernels compiled for the plainest processor of the family, its oldest BLAS kernel, and
+#: Conditions of the second job: kernels compiled for the plainest processor of the family, an early BLAS kernel, and
 #: two BLAS threads. What stays the same are the library versions.
 OTHER_MACHINE = {
     "NUMBA_CPU_NAME": "generic",

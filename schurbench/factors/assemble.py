@@ -61,10 +61,12 @@ def assemble(run: Run) -> Factors:
         raise SettingsError("the saved run holds no Z, so it has no factors; run it again with accumulate=True")
     form = run.settings.form
     t, z = np.triu(state.H, -1), np.array(state.Z, order="C")
-    solve_small_blocks(t, z, form)
+    solved = solve_small_blocks(t, z, form)
     t = _in_matrix_units(t, z, state.exponent, form)
     if (state.D == 1.0).all():
-        return Factors(t, z, form, run.matrix, run.settings, run.environment)
+        left = f"{plural(solved, '2×2 block')} left by the stopped run solved directly."
+        notes = (left,) if solved and not run.converged else ()
+        return Factors(t, z, form, run.matrix, run.settings, run.environment, notes=notes)
     scaled = _scaled_pair(state.D, t, z, form)
     t, z, note = _of_the_loaded_matrix(run, scaled)
     return Factors(t, z, form, run.matrix, run.settings, run.environment, scaled, notes=(note,))

@@ -13,7 +13,7 @@ from schurbench.measures import ULP, norm1
 __all__ = ["SEPARATION_LIMIT", "condition_numbers", "separations"]
 
 #: Largest n for which separations are estimated; each costs a reordering of the whole factor.
-SEPARATION_LIMIT = 150
+SEPARATION_LIMIT = 250
 
 Real = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]

@@ -80,12 +80,13 @@ def eigenvalues_of(t: Array, form: str) -> npt.NDArray[np.complex128]:
     return values
 
 
-def solve_small_blocks(t: Array, z: Array, form: str) -> None:
-    """Bring every isolated 2×2 block that is not standard into final form, in place (T and Z stay consistent).
+def solve_small_blocks(t: Array, z: Array, form: str) -> int:
+    """Bring every isolated 2×2 block that is not standard into final form, in place; returns how many there were.
 
     An isolated 2×2 block needs no iteration; LAPACK's 2×2 Schur factorisation standardises it
     (``dlanv2``; Bai & Demmel 1993, LAPACK Working Note 54, section 4).
     """
+    solved = 0
     for lo, hi in unfinished_windows(t, form):
         if hi - lo != 2:
             continue
@@ -97,6 +98,8 @@ def solve_small_blocks(t: Array, z: Array, form: str) -> None:
         t[rows, hi:] = u.conj().T @ t[rows, hi:]
         t[rows, rows] = block
         z[:, rows] = z[:, rows] @ u
+        solved += 1
+    return solved
 
 
 def restore_underflowed_blocks(t: Array, z: Array) -> None:

@@ -256,7 +256,7 @@ class Iteration:
         if window[1]:
             shifts, exceptional = self._propose(window)
             kind = _KINDS[self._real, len(shifts)]
-            rotations = sweep(self._H, self._Qh, self._work, window, shifts)
+            rotations = sweep(self._H, self._Qh, self._work, window, shifts, index)
             found = len(deflations)
             self._scan(index, deflations, before=False)
             self._sweeps += 1

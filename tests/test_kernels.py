@@ -46,7 +46,7 @@ def test_single_shift_step_is_rq_plus_shift(dtype: type, n: int, lo: int, hi: in
             H0[edge, edge - 1] = 0.0
     shift = dtype(0.3 if dtype is float else 0.3 - 0.7j)
     H, Qh, work = H0.copy(), np.eye(n, dtype=dtype), Workspace(n, H0.dtype)
-    rotations = single_shift_step(H, Qh, lo, hi, shift, work.C, work.S)
+    rotations = single_shift_step(H, Qh, lo, hi, shift, work.C, work.S, 1)
 
     assert rotations == hi - lo - 1
     # Hessenberg form is kept exactly, and so are the zeros at the window's edges
@@ -76,7 +76,7 @@ def test_double_shift_sweep_equals_two_explicit_steps(n: int, lo: int, hi: int, 
             H0[edge, edge - 1] = 0.0
     H, Qh, work = H0.copy(), np.eye(n), Workspace(n, H0.dtype)
     first, second = map(complex, pair)
-    reflectors = double_shift_sweep(H, Qh, lo, hi, first.real, first.imag, second.real, second.imag, work.V)
+    reflectors = double_shift_sweep(H, Qh, lo, hi, first.real, first.imag, second.real, second.imag, work.V, 1)
 
     assert reflectors == hi - lo - 1
     assert not np.tril(H, -2).any()
@@ -96,7 +96,7 @@ def test_double_shift_sweep_equals_two_explicit_steps(n: int, lo: int, hi: int, 
     [(3.0, 4.0), (0.0, 2.0), (2.0, 0.0), (-1e200, 1e200), (1e-200, -1e-200), (1 + 2j, 3 - 1j), (0j, 2j), (-2j, 1e-300 + 0j)],
 )
 def test_rotation_annihilates(f: complex, g: complex) -> None:
-    c, s, r = make_rotation(f, g)
+    c, s, r = make_rotation(f, g, 1, 0)
     scale = max(abs(f), abs(g))
     assert abs(c * c + abs(s) ** 2 - 1.0) < 4 * ULP
     assert abs(-np.conj(s) * f + c * g) <= 4 * ULP * scale
@@ -105,7 +105,7 @@ def test_rotation_annihilates(f: complex, g: complex) -> None:
 
 @pytest.mark.parametrize("x", [(1.0, 2.0, 3.0), (-1e-200, 1e-201, 2e-200), (1e200, -1e200, 3e199), (0.0, 1.0, 0.0), (5.0, 0.0, 0.0)])
 def test_reflector_annihilates(x: tuple[float, float, float]) -> None:
-    t, v1, v2, beta = make_reflector(*x)
+    t, v1, v2, beta = make_reflector(*x, 1, 0)
     v = np.array([1.0, v1, v2])
     y = np.array(x) - t * v * (v @ np.array(x))
     np.testing.assert_allclose(y, [beta, 0.0, 0.0], atol=8 * ULP * max(map(abs, x)))
@@ -201,6 +201,6 @@ def test_reference_spectrum_after_many_steps() -> None:
     Qh = np.eye(12, dtype=complex)
     rng = np.random.default_rng(0)
     for _ in range(200):
-        single_shift_step(H, Qh, 0, 12, complex(*rng.standard_normal(2)), work.C, work.S)
+        single_shift_step(H, Qh, 0, 12, complex(*rng.standard_normal(2)), work.C, work.S, 1)
     after = scipy.linalg.eigvals(H)
     assert matched_distance(after, before).max() < 1e-11

@@ -77,6 +77,11 @@ class Journal:
         if 2 * self._state_bytes <= self.keep:
             self.checkpoints[index] = (H.copy(), Qh.copy())
 
+    @property
+    def held(self) -> int:
+        """States whose bands are in memory, 0 … held−1; later ones are rebuilt by replay."""
+        return self._banded
+
     def bands(self, k: int) -> npt.NDArray[np.generic]:
         """Diagonal, subdiagonal and superdiagonal of H after step k, shape (3, n); the last two end with 0."""
         if k < self._banded:
@@ -152,7 +157,7 @@ def replay_step(H: Array, Qh: Array, work: object, step: Step) -> None:
         if deflation.before_sweep:
             deflate(H, Qh, deflation.row, 0 if deflation.kind is DeflationKind.SPLIT else deflation.size)
     if step.shifts:
-        sweep(H, Qh, work, step.window, step.shifts)
+        sweep(H, Qh, work, step.window, step.shifts, step.index)
     for deflation in step.deflations:
         if not deflation.before_sweep:
             deflate(H, Qh, deflation.row, 0 if deflation.kind is DeflationKind.SPLIT else deflation.size)

@@ -40,14 +40,14 @@ class Rotations(Sequence[Rotation]):
         none = np.empty((0, journal.n), dtype=H.dtype)
         acts: list[tuple[int, str, Array, complex]] = []  # row, side, G, shift to subtract before or add after
         if step.kind is StepKind.DOUBLE:
-            sweep(H, none, work, step.window, step.shifts)
+            sweep(H, none, work, step.window, step.shifts, step.index)
             for k in range(lo, hi - 1):
                 v = np.array([1.0, work.V[k, 1], work.V[k, 2]][: min(3, hi - k)])
                 acts.append((k, "both", np.eye(len(v)) - work.V[k, 0] * np.outer(v, v), 0.0))
         elif step.shifts:
             for shift in step.shifts:
                 typed = float(shift.real) if H.dtype == np.float64 else complex(shift)
-                single_shift_step(H, none, lo, hi, typed, work.C, work.S)
+                single_shift_step(H, none, lo, hi, typed, work.C, work.S, step.index)
                 for side in ("left", "right"):
                     for k in range(lo, hi - 1):
                         c, s = work.C[k], work.S[k]

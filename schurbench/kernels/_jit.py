@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+import hashlib
 from collections.abc import Callable
+from functools import cache
+from pathlib import Path
 from typing import Any, TypeVar
 
 import numba
+import numba.extending
 
-__all__ = ["compiled", "inlined"]
+__all__ = ["compiled", "exact", "inlined", "overloaded_by_type"]
 
 F = TypeVar("F", bound=Callable[..., Any])
 
@@ -19,11 +23,54 @@ _OPTIONS: dict[str, Any] = {"nogil": True, "fastmath": {"contract"}, "error_mode
 def compiled(function: F) -> F:
     """Compile on first call, cached on disk wherever numba finds a directory it can write."""
     try:
-        return numba.njit(cache=True, **_OPTIONS)(function)
+        dispatcher = numba.njit(cache=True, **_OPTIONS)(function)
     except RuntimeError:  # neither the package's directory nor the user's cache directory can be written
         return numba.njit(**_OPTIONS)(function)
+    _forget_stale(dispatcher.stats.cache_path)
+    return dispatcher
+
+
+@cache
+def _forget_stale(directory: str) -> None:
+    """Empty the cache of this room when any of its source files has changed.
+
+    Numba compares the time stamp of a kernel's own file only, so that a change in `rotations` would leave the compiled
+    sweeps of another file as they were.
+    """
+    sources = sorted(Path(__file__).parent.glob("*.py"))
+    digest = hashlib.sha256(b"".join(path.read_bytes() for path in sources)).hexdigest()
+    place = Path(directory)
+    mark = place / "kernels.sha256"
+    try:
+        if mark.exists() and mark.read_text() == digest:
+            return
+        for stale in [*place.glob("*.nbi"), *place.glob("*.nbc")]:
+            stale.unlink(missing_ok=True)
+        mark.write_text(digest)
+    except OSError:
+        pass  # a cache that cannot be written cannot have gone stale through us
 
 
 def inlined(function: F) -> F:
     """Compile as part of the kernels that call it."""
     return numba.njit(inline="always", **_OPTIONS)(function)
+
+
+def exact(function: F) -> F:
+    """Compile without fused instructions, for the few lines whose rounding errors must be exactly those written."""
+    return numba.njit(nogil=True, error_model="numpy")(function)
+
+
+def overloaded_by_type(for_real: F, for_complex: F) -> Callable[[F], F]:
+    """Let kernels call one name for (float, scalar, float) arguments and get the version for the scalar's type."""
+
+    def decorate(function: F) -> F:
+        @numba.extending.overload(function, jit_options=_OPTIONS)
+        def choose(c, s, turn):  # type: ignore[no-untyped-def]  # numba passes types, not values
+            if isinstance(s, numba.types.Complex):
+                return lambda c, s, turn: for_complex(c, s, turn)
+            return lambda c, s, turn: for_real(c, s, turn)
+
+        return function
+
+    return decorate

@@ -16,21 +16,23 @@ from schurbench.kernels.workspace import Workspace
 __all__ = ["deflate", "sweep"]
 
 
-def sweep(H: np.ndarray, Qh: np.ndarray, work: Workspace, window: tuple[int, int], shifts: Sequence[complex]) -> int:
+def sweep(
+    H: np.ndarray, Qh: np.ndarray, work: Workspace, window: tuple[int, int], shifts: Sequence[complex], index: int
+) -> int:
     """One sweep on the window; returns the number of rotations (reflectors for a double shift).
 
     One shift is an explicit single-shift step. Two shifts are an implicit double-shift sweep on a real H and two
-    single-shift steps on a complex one.
+    single-shift steps on a complex one. ``index`` is that of the step, by which last bits are rounded in turn.
     """
     lo, hi = window
     if H.dtype == np.float64:
         if len(shifts) == 2:
             first, second = shifts
-            return double_shift_sweep(H, Qh, lo, hi, first.real, first.imag, second.real, second.imag, work.V)
-        return single_shift_step(H, Qh, lo, hi, float(shifts[0].real), work.C, work.S)
+            return double_shift_sweep(H, Qh, lo, hi, first.real, first.imag, second.real, second.imag, work.V, index)
+        return single_shift_step(H, Qh, lo, hi, float(shifts[0].real), work.C, work.S, index)
     rotations = 0
     for shift in shifts:
-        rotations += single_shift_step(H, Qh, lo, hi, complex(shift), work.C, work.S)
+        rotations += single_shift_step(H, Qh, lo, hi, complex(shift), work.C, work.S, index)
     return rotations
 
 

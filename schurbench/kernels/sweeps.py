@@ -20,7 +20,7 @@ __all__ = ["double_shift_sweep", "single_shift_step"]
 
 
 @compiled
-def single_shift_step(H, Qh, lo, hi, shift, C, S):
+def single_shift_step(H, Qh, lo, hi, shift, C, S, salt):
     """Explicit single-shift QR step: H − σI = QR by rotations from the left, then RQ + σI by the same from the right.
 
     Golub & Van Loan, Matrix Computations, 4th ed., §7.4.2 (QR step for a Hessenberg matrix) with a shift, §7.5.1.
@@ -33,6 +33,8 @@ def single_shift_step(H, Qh, lo, hi, shift, C, S):
     shift : scalar of H's type
     C : (n,) float64 array; S : (n,) array of H's type
         Receive the rotations lo … hi−2: rows k, k+1 were multiplied by [C_k, S_k; −conj(S_k), C_k].
+    salt : int
+        Number of the sweep, by which the last bits of the rotations are rounded in turn (see `rotations`).
 
     Returns
     -------
@@ -43,7 +45,7 @@ def single_shift_step(H, Qh, lo, hi, shift, C, S):
     for i in range(lo, hi):
         H[i, i] -= shift
     for k in range(lo, hi - 1):
-        c, s, r = make_rotation(H[k, k], H[k + 1, k])
+        c, s, r = make_rotation(H[k, k], H[k + 1, k], salt, k)
         C[k] = c
         S[k] = s
         H[k, k] = r
@@ -59,7 +61,7 @@ def single_shift_step(H, Qh, lo, hi, shift, C, S):
 
 
 @compiled
-def double_shift_sweep(H, Qh, lo, hi, re1, im1, re2, im2, V):
+def double_shift_sweep(H, Qh, lo, hi, re1, im1, re2, im2, V, salt):
     """Implicit double-shift sweep in real arithmetic: a bulge chased down the window by 3-element reflectors.
 
     Francis 1961/62; Golub & Van Loan, Matrix Computations, 4th ed., §7.5.4–7.5.5 (Algorithm 7.5.1).
@@ -73,6 +75,8 @@ def double_shift_sweep(H, Qh, lo, hi, re1, im1, re2, im2, V):
         The two shifts: both real, or a conjugate pair (im2 = −im1).
     V : (n, 3) float64 array
         Receives the reflectors lo … hi−2 as (t, v₁, v₂).
+    salt : int
+        As above.
 
     Returns
     -------
@@ -99,7 +103,7 @@ def double_shift_sweep(H, Qh, lo, hi, re1, im1, re2, im2, V):
     for k in range(lo, hi - 2):
         if k > lo:
             x0, x1, x2 = H[k, k - 1], H[k + 1, k - 1], H[k + 2, k - 1]
-        t, v1, v2, beta = make_reflector(x0, x1, x2)
+        t, v1, v2, beta = make_reflector(x0, x1, x2, salt, k)
         V[k, 0], V[k, 1], V[k, 2] = t, v1, v2
         if k > lo:
             H[k, k - 1] = beta
@@ -112,7 +116,7 @@ def double_shift_sweep(H, Qh, lo, hi, re1, im1, re2, im2, V):
             H[i, k + 1] -= w * v1
             H[i, k + 2] -= w * v2
     k = hi - 2
-    t, v1, v2, beta = make_reflector(H[k, k - 1], H[k + 1, k - 1], 0.0)
+    t, v1, v2, beta = make_reflector(H[k, k - 1], H[k + 1, k - 1], 0.0, salt, k)
     V[k, 0], V[k, 1], V[k, 2] = t, v1, 0.0
     H[k, k - 1] = beta
     H[k + 1, k - 1] = 0.0

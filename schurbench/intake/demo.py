@@ -159,10 +159,12 @@ def demo_matrix(n: int = 83, *, gates: str = "free", reach: CanalReach | None = 
       0.3, 5 and 15 per hour, although each backward error is of rounding size; median condition number after
       balancing 2·10⁸ at n = 20 and above 10¹² from n = 83 (submerged: 18, 35, 5·10³, 4·10¹¹).
     - The slowest mode decays with 1.089 per hour at every n; LAPACK reports 1.089, 1.07, 0.986 and 0.4.
+    - Numbering the same states from the tail to the head makes A block upper triangular. The Hessenberg reduction then
+      keeps the blocks apart, and every eigenvalue is right to 10⁻¹² at every n.
 
-    .. caution:: The last point is why this plant is here: a stability margin read off computed eigenvalues can be far
-       from the truth when they are ill-conditioned. Judge the safety of a real plant with licensed engineering
-       practice, never by this model.
+    .. caution:: This is why the plant is here: a stability margin read off computed eigenvalues can be far from the
+       truth when they are ill-conditioned. Judge the safety of a real plant with licensed engineering practice, never
+       by this model.
     """
     if isinstance(n, bool) or not isinstance(n, int | np.integer) or not _SMALLEST <= n <= _LARGEST:
         raise SettingsError(f"the canal has {_SMALLEST} to {_LARGEST} states; n was {n!r}")

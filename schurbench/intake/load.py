@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 import hashlib
+import inspect
 import os
 import sys
 from collections.abc import Sequence
@@ -263,7 +264,9 @@ def _from_model(source: Any) -> tuple[Found, str]:
             ) from error
     n = values.shape[0] if values.ndim == 2 else 0
     for mass in _MASS_NAMES:
-        if getattr(source, mass, None) is not None and not _is_identity(getattr(source, mass), n):
+        held = getattr(source, mass, None)
+        # A method of that name says nothing about the model.
+        if held is not None and not inspect.isroutine(held) and not _is_identity(held, n):
             raise InputError(
                 f"{kind} carries {mass}, which is not the identity, so its eigenvalue problem is a generalised one; "
                 f"bring the model to the form x' = A x first"

@@ -200,8 +200,19 @@ class Case:
         """Steps of the later part of a stretch, at most 160, evenly spaced; transients at its start are left out."""
         first = stretch.first + stretch.length // 4
         last = stretch.last if stretch.end is None else max(stretch.last - 1, first)
-        count = min(_SAMPLES, last - first + 1)
+        if not self._replay_is_cheap:
+            last = min(last, self.run.journal.held - 1)
+        count = max(0, min(_SAMPLES, last - first + 1))
         return np.unique(np.linspace(first, last, count).astype(np.int64))
+
+    @cached_property
+    def _replay_is_cheap(self) -> bool:
+        """Whether rebuilding what a small ``keep`` left out of memory, once for each stretch, fits in the budget."""
+        return _EXAMINED * self.run.phases["iterate"] <= _LEAST
+
+    def readable(self, stretch: Stretch) -> bool:
+        """Whether enough states of a stretch can be read to judge it."""
+        return self.sampled_steps(stretch).size >= 2
 
     def shifts(self, stretch: Stretch) -> Complex:
         """Shifts of the sampled steps, shape (steps, shifts a sweep); missing ones of shorter sweeps are NaN."""

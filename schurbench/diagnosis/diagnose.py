@@ -47,7 +47,7 @@ def _iteration_findings(case: Case) -> list[Finding]:
     judged: dict[str, list[Judgement]] = {}
     open_stretches: list[Stretch] = []
     for stretch in case.troubled:
-        for cause in STRETCH_CAUSES:
+        for cause in STRETCH_CAUSES if case.readable(stretch) else ():
             judgement = cause.judge(case, stretch)
             if judgement is not None:
                 judged.setdefault(cause.code, []).append(judgement)

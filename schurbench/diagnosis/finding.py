@@ -236,20 +236,22 @@ def solve_structured(matrix: Any, structure: str) -> tuple[npt.NDArray[Any], npt
     For a normal A the Hermitian part H₁ and the skew part iH₂ commute, so the Hermitian H₁ + tH₂ has the same
     eigenvectors for every t, and for all but finitely many t no further ones. Where two eigenvalues of the sum lie
     close, their vectors come out mixed by about ε over the distance; since the eigenvalues of A itself are apart
-    there, one step of first-order perturbation theory separates them again.
+    there, one step of first-order perturbation theory separates them again. Driver ``evd``, because ``evr``, the
+    default, leaves vectors an order of magnitude less orthogonal (measured on cyclic matrices of order 100: 27 against
+    0.8 in units of n·ulp).
     """
     import scipy.linalg
 
     a: Any = matrix.array if isinstance(matrix, WorkingMatrix) else np.asarray(matrix)
     adjoint = a.conj().T
     if structure == "hermitian":
-        values, vectors = scipy.linalg.eigh((a + adjoint) / 2, check_finite=False)
+        values, vectors = scipy.linalg.eigh((a + adjoint) / 2, driver="evd", check_finite=False)
         return np.asarray(values), np.asarray(vectors)
     if structure == "skew":
-        values, vectors = scipy.linalg.eigh((a - adjoint) / 2j, check_finite=False)
+        values, vectors = scipy.linalg.eigh((a - adjoint) / 2j, driver="evd", check_finite=False)
         return 1j * np.asarray(values), np.asarray(vectors)
     mixed = (a + adjoint) / 2 + np.sqrt(2.0) * (a - adjoint) / 2j
-    vectors = np.asarray(scipy.linalg.eigh(mixed, check_finite=False)[1])
+    vectors = np.asarray(scipy.linalg.eigh(mixed, driver="evd", check_finite=False)[1])
     nearly = vectors.conj().T @ a @ vectors
     values = np.diagonal(nearly)
     gap = values[None, :] - values[:, None]

@@ -81,8 +81,10 @@ def forecast(case: Case) -> Forecast | None:
             waits.append(waited)
             sizes.append(out)
             waited = 0
-    if len(waits) < _EVIDENCE or waited >= case.healthy.trouble_wait:
+    if len(waits) <= _EVIDENCE or waited >= case.healthy.trouble_wait:
         return None
+    # The first one takes longer, because its shifts start from nothing: it says little about the rest.
+    waits, sizes = waits[1:], sizes[1:]
     ahead = (run.n - case.deflated) / float(np.mean(sizes))
     mean = float(np.mean(waits))
     spread = float(np.std(waits, ddof=1))

@@ -34,24 +34,25 @@ class RealShiftOnPair:
         half = (diagonal[:, hi - 2] - diagonal[:, hi - 1]) / 2
         disc = half * half + sub[:, hi - 2] * sup[:, hi - 2]
         share = float(np.mean(disc < 0.0))
-        if share < _SHARE:
+        inside = np.abs(sub[:, hi - 2])
+        if share < _SHARE or not inside.all():
             return None
         centre = (diagonal[-1, hi - 2] + diagonal[-1, hi - 1]) / 2
         pair = complex(centre, float(np.sqrt(max(-disc[-1], 0.0))))
-        # The pair as a whole still separates from the rest, only linearly.
-        decay = case.decay(stretch)
+        sweeps = max(1, int(np.ptp(case.sampled_steps(stretch))))
+        to_pair, to_conjugate = abs(pair - shifts[-1, 0]), abs(pair.conjugate() - shifts[-1, 0])
         evidence = {
             "sweeps_without_deflation": float(stretch.length),
             "share_of_sweeps_with_complex_pair": share,
             "real_part_of_pair": float(run.to_matrix_units(pair.real)),
             "imaginary_part_of_pair": float(run.to_matrix_units(pair.imag)),
             "last_shift": float(run.to_matrix_units(shifts[-1, 0].real)),
-            "distance_to_pair": float(run.to_matrix_units(abs(pair - shifts[-1, 0]))),
-            "distance_to_conjugate": float(run.to_matrix_units(abs(pair.conjugate() - shifts[-1, 0]))),
+            "distance_to_pair": float(run.to_matrix_units(to_pair)),
+            "distance_to_conjugate": float(run.to_matrix_units(to_conjugate)),
+            # of the entry between the two rows, over the whole stretch
+            "measured_decay_per_sweep": float(np.exp(np.log(inside[-1] / inside[0]) / sweeps)),
+            "predicted_decay_per_sweep": float(to_pair / to_conjugate) if to_conjugate > 0.0 else 1.0,
         }
-        if decay is not None:
-            evidence["measured_decay_per_sweep"] = decay.measured
-            evidence["predicted_decay_per_sweep"] = decay.predicted
         return Judgement(stretch, (hi - 2, hi), confidence=round(0.5 + 0.5 * share, 3), evidence=evidence)
 
     def finding(self, case: Case, judgements: tuple[Judgement, ...]) -> Finding:
@@ -63,8 +64,9 @@ class RealShiftOnPair:
             f"For {worst.stretch.length} sweeps rows {hi - 2} and {hi - 1} kept a complex pair "
             f"({number(100 * e['share_of_sweeps_with_complex_pair'])} % of the sweeps; at the end "
             f"{number(e['real_part_of_pair'])} ± {number(e['imaginary_part_of_pair'])}i) while every shift was real: "
-            f"the last one, {number(e['last_shift'])}, is {number(e['distance_to_pair'])} from both members"
-            f"{case.carriers(worst.rows)}."
+            f"the last one, {number(e['last_shift'])}, is {number(e['distance_to_pair'])} from both members, so the "
+            f"entry between them shrinks by {number(e['predicted_decay_per_sweep'])} a sweep (measured "
+            f"{number(e['measured_decay_per_sweep'])}){case.carriers(worst.rows)}."
         )
         return Finding(
             cause=self.code,

@@ -9,8 +9,8 @@ from schurbench.prepare.profile import rounding_level
 
 __all__ = ["StructureUnused"]
 
-_HERMITIAN = "import scipy.linalg\nvalues, vectors = scipy.linalg.eigh(matrix)"
-_SKEW = "import scipy.linalg\nvalues, vectors = scipy.linalg.eigh(matrix / 1j)\nvalues = 1j * values"
+_HERMITIAN = "import scipy.linalg\nvalues, vectors = scipy.linalg.eigh(matrix, driver='evd')"
+_SKEW = "import scipy.linalg\nvalues, vectors = scipy.linalg.eigh(matrix / 1j, driver='evd')\nvalues = 1j * values"
 _NORMAL = "from schurbench.diagnosis import solve_structured\nvalues, vectors = solve_structured(matrix, 'normal')"
 
 #: Profile field, word for a real and a complex matrix, structure for the solver, call, what the solver makes use of.

@@ -260,7 +260,7 @@ def _trust(factors: Factors) -> str:
             "to working precision. Trust the mean of such a cluster rather than its members."
         )
     else:
-        hopeless = movement[worst] >= np.linalg.norm(factors.T)
+        hopeless = ULP * condition[worst] >= 1.0
         beyond = ", more than the norm of A, so no digit of it is determined" if hopeless else ""
         sentences.append(
             f"The worst-conditioned eigenvalue, {_complex(factors.eigenvalues[worst])}, has condition number "

@@ -31,7 +31,7 @@ from schurbench.journal.records import (
     Window,
 )
 from schurbench.journal.run import Run
-from schurbench.measures import Array, frobenius
+from schurbench.measures import RATIO_LIMIT, Array, frobenius, orthogonality_ratio, residual_ratio
 from schurbench.policy import (
     EXCEPTIONAL_PERIOD,
     Francis,
@@ -45,7 +45,7 @@ from schurbench.policy import (
     exceptional_shifts,
     strategy_for,
 )
-from schurbench.prepare.preparation import BALANCE_CHOICES, prepare
+from schurbench.prepare.preparation import BALANCE_CHOICES, prepare, single_blas_thread
 
 if TYPE_CHECKING:
     from pathlib import Path
@@ -59,6 +59,10 @@ STALLED_AFTER = 60
 #: Largest single shift accepted, in Frobenius norms of H. No eigenvalue lies beyond one norm, and an explicit step with
 #: shift σ makes rounding errors of size ulp·|σ|, so a larger shift can only spoil the backward error.
 _LARGEST_SHIFT = 4.0
+
+#: Sweeps, in units of n, before rounding in H and Z is measured for the first time, and between two measurements. Runs that
+#: converge need less than 6 n (3.4 n is usual for single shifts); a measurement costs three matrix products.
+_ROUNDING_FIRST, _ROUNDING_EVERY = 6, 2
 
 #: Longest interval between two progress calls, seconds; more often would cost more than it tells.
 _PROGRESS_EVERY = 0.05
@@ -137,6 +141,7 @@ class Iteration:
         self._fresh = True  # nothing has been scanned yet
         self._waited = 0
         self._sweeps = 0
+        self._measure_at = _ROUNDING_FIRST * max(10, self.n)
         self._stop: Stop | None = None
         self._journal = Journal(self._H, self._Qh, self._window, self.settings.keep)
 
@@ -198,11 +203,13 @@ class Iteration:
         """
         if self._stop is not None:
             raise SchurbenchError(f"the iteration is done ({self._stop.message}); start a new one for more steps")
+        began = time.perf_counter()
         try:
-            step = self._step()
+            step = self._step(began)
         except BaseException:
             self._undo()
             raise
+        self._phases["iterate"] += time.perf_counter() - began
         if self._window[1] == 0:
             self._stop = Stop(StopReason.CONVERGED, f"converged after {_count(self._sweeps, 'sweep')}", (0, 0))
         elif self.settings.stop_when_stalled and self._waited >= STALLED_AFTER:
@@ -210,6 +217,13 @@ class Iteration:
             self._stop = Stop(
                 StopReason.STALLED,
                 f"stalled: no deflation in {self._waited} sweeps on rows {lo} to {hi - 1}; see the diagnosis for what to change",
+                self._window,
+            )
+        elif self._rounding_too_large():
+            self._stop = Stop(
+                StopReason.STALLED,
+                f"stalled: after {self._sweeps} sweeps rounding has used up half of what a certificate allows, so that more "
+                "sweeps would spoil the factors; see the diagnosis for what to change",
                 self._window,
             )
         elif self._sweeps >= self.settings.limit:
@@ -239,8 +253,7 @@ class Iteration:
             _final=(self._H.copy(), self._Qh.copy()),
         )
 
-    def _step(self) -> Step:
-        began = time.perf_counter()
+    def _step(self, began: float) -> Step:
         sweep = self._kernels[0]
         index = len(self._journal.steps) + 1
         deflations: list[Deflation] = []
@@ -263,7 +276,6 @@ class Iteration:
             waited = 0 if len(deflations) > found else waited + 1
         self._waited = waited
         seconds = time.perf_counter() - began
-        self._phases["iterate"] += seconds
         step = Step(index, window, kind, shifts, exceptional, rotations, seconds, tuple(deflations))
         self._journal.add(step, self._H, self._Qh, self._window)
         return step
@@ -327,6 +339,25 @@ class Iteration:
                 lo = row
                 break
         self._window = (lo, hi) if hi > 0 else (0, 0)
+
+    def _rounding_too_large(self) -> bool:
+        """Whether a long run must end so that H and Z stay within the certificate.
+
+        A run that neither converges nor changes repeats the same roundings in every sweep, so that they add up instead of
+        averaging out; thousands of such sweeps would push the ratios over their limit.
+        """
+        if self._sweeps < self._measure_at or not self.settings.accumulate:
+            return False
+        self._measure_at = self._sweeps + _ROUNDING_EVERY * max(10, self.n)
+        Z = self._Qh.conj().T
+        with single_blas_thread():
+            return (
+                max(
+                    orthogonality_ratio(Z),
+                    residual_ratio(self.preparation.working(self.matrix), Z, self._H),
+                )
+                > 0.5 * RATIO_LIMIT
+            )
 
     def _undo(self) -> None:
         """Back to the last recorded state after a step was broken off in the middle."""

@@ -26,16 +26,10 @@ DATA = Path(__file__).parent / "data"
 REAL_STRATEGIES = ("zero", "rayleigh", "francis", "wilkinson")
 
 
-def scaled(a: np.ndarray, exponent: int) -> np.ndarray:
-    half = exponent // 2
-    return a * 2.0**half * 2.0 ** (exponent - half)
-
-
 def check(run: sb.Run, *, must_converge: bool) -> None:
     """Ratios under the limit whether or not it converged; exact structure where it did."""
-    p = run.preparation
     state = run.state(len(run.steps))
-    working = np.ascontiguousarray(scaled(run.matrix.array, p.exponent) / p.D[:, None] * p.D)
+    working = run.preparation.working(run.matrix)
     what = f"{run.matrix.name}, {run.settings.strategy}, {run.stop.message}"
     assert residual_ratio(working, state.Z, state.H) < RATIO_LIMIT, what
     assert orthogonality_ratio(state.Z) < RATIO_LIMIT, what

@@ -55,6 +55,10 @@ class Preparation:
     permutation: npt.NDArray[np.int64]
     isolated: tuple[int, int]
 
+    def working(self, matrix: WorkingMatrix) -> Array:
+        """The matrix that is iterated on, 2^exponent · D⁻¹ A D, shape (n, n)."""
+        return np.ascontiguousarray(_ldexp(matrix.array, self.exponent) / self.D[:, None] * self.D)
+
 
 def prepare(
     matrix: WorkingMatrix,
@@ -93,8 +97,7 @@ def prepare(
     a: Array = matrix.array
     exponent = _working_exponent(a)
     if exponent:
-        half = exponent // 2  # in two factors, because 2^exponent itself may overflow
-        a = (a * 2.0**half) * 2.0 ** (exponent - half)
+        a = _ldexp(a, exponent)
     if flip:
         a = a[::-1, ::-1]
     start = np.arange(n - 1, -1, -1) if flip else np.arange(n)
@@ -116,6 +119,12 @@ def prepare(
         if array is not None:
             array.setflags(write=False)
     return Preparation(H, Z, D, exponent, form, flip, permutation, (lo, hi))
+
+
+def _ldexp(a: Array, exponent: int) -> Array:
+    """2^exponent · a, in two factors because 2^exponent itself may overflow."""
+    half = exponent // 2
+    return (a * 2.0**half) * 2.0 ** (exponent - half)
 
 
 def _working_exponent(a: Array) -> int:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import io
 import json
 import os
+import shlex
 import signal
 import subprocess
 import sys
@@ -87,6 +88,17 @@ def test_help_names_the_settings_there_are(capsys: pytest.CaptureFixture[str]) -
 def test_version(capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["--version"]) == 0
     assert capsys.readouterr().out == f"schurbench {sb.__version__}\n"
+
+
+def test_readme_gives_one_command_for_the_job_and_one_for_the_tests() -> None:
+    # .ci/run carries out the second, read from between these very marks.
+    text = README.read_text(encoding="utf-8")
+    blocks = {
+        mark: text.split(f"\n<!-- {mark} -->\n```bash\n")[1].split("\n```")[0].strip() for mark in ("job", "tests")
+    }
+    assert all("\n" not in block for block in blocks.values())
+    assert blocks["job"].endswith(".venv/bin/schurbench open")
+    assert blocks["tests"].endswith(".venv/bin/python -m pytest")
 
 
 # --- bad input and usage: exit 2, one line ------------------------------------------------------------------------
@@ -323,6 +335,26 @@ def test_explaining_a_failed_run_is_normal_work(tmp_path: Path, capsys: pytest.C
     told = strict(capsys.readouterr().out)
     assert isinstance(told, dict)
     assert told["findings"][0]["cause"] == "equal-moduli"
+
+
+def test_the_commands_that_remedies_print_are_commands(
+    data: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    file = tmp_path / "cycle.npy"
+    np.save(file, np.roll(np.eye(12), 1, axis=0))
+    printed = []
+    for arguments in (
+        ["--strategy", "zero", "--limit", "40", "--deflation", "norm", "--tol", "1e-14", "--flip"],
+        ["--shifts=0.1,-0.1", "--limit", "4", "--balance", "none"],
+        ["--strategy", "francis", "--exceptional", "0", "--limit", "50"],
+    ):
+        assert main(["explain", str(file), *arguments]) == 0
+        lines = [line.strip() for line in capsys.readouterr().out.splitlines()]
+        printed += [line for line in lines if line.startswith("schurbench ")]
+    assert len(printed) >= 3
+    for line in printed:
+        words = shlex.split(line)
+        assert build_parser().parse_args(words[1:]).file == file
 
 
 def test_compare(data: Path, capsys: pytest.CaptureFixture[str]) -> None:

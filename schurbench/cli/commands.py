@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 from schurbench.cli.console import Console, interruptible
 from schurbench.cli.options import SETTINGS
-from schurbench.cli.wording import describe_run, facts, introduce, tabulate, tell_findings
+from schurbench.cli.wording import describe_run, facts, introduce, tabulate
 from schurbench.errors import InputError, SchurbenchError, SettingsError
 
 if TYPE_CHECKING:
@@ -67,6 +67,7 @@ def run(args: argparse.Namespace, console: Console) -> int:
 def explain(args: argparse.Namespace, console: Console) -> int:
     """Why the iteration on FILE, or in RUN, went as it did."""
     import schurbench as sb
+    from schurbench.diagnosis.page import html_page, page
 
     if args.html is not None:
         _require_free([args.html], args.replace, args.file)
@@ -74,15 +75,11 @@ def explain(args: argparse.Namespace, console: Console) -> int:
         result = _run_of(args, console, cancel)
     diagnosis = sb.diagnose(result, try_remedies=args.try_remedies)
     if args.html is not None:
-        from schurbench.cli.page import explanation_page
-
-        args.html.write_text(explanation_page(result, diagnosis), encoding="utf-8")
+        args.html.write_text(html_page(result, diagnosis), encoding="utf-8")
     if args.json:
         console.json(diagnosis.to_dict())
     else:
-        introduce(result.matrix, console)
-        describe_run(result, console)
-        tell_findings(diagnosis, console)
+        console.say(page(result, diagnosis).rstrip())
         if args.html is not None:
             console.say(f"\nWritten to {args.html}.")
     return INTERRUPTED if result.stop.reason == "cancelled" and not _is_run(args.file) else DONE

@@ -2,19 +2,17 @@
 
 from __future__ import annotations
 
-from textwrap import indent
 from typing import TYPE_CHECKING
 
 from schurbench.cli.console import Console, figure
 
 if TYPE_CHECKING:
     from schurbench.comparison import Comparison
-    from schurbench.diagnosis import Diagnosis, Finding
     from schurbench.intake import WorkingMatrix
     from schurbench.journal import Run
     from schurbench.prepare import Profile
 
-__all__ = ["describe_run", "facts", "introduce", "tabulate", "tell_findings", "where"]
+__all__ = ["describe_run", "facts", "introduce", "tabulate"]
 
 
 def introduce(m: WorkingMatrix, console: Console) -> None:
@@ -56,39 +54,6 @@ def describe_run(result: Run, console: Console) -> None:
         f"{plural(result.sweeps, 'sweep')} in {figure(result.seconds)} s with strategy {s.strategy}, {s.form} form, "
         f"balance {s.balance}, deflation test {s.deflation}: {result.stop.message}."
     )
-
-
-def tell_findings(diagnosis: Diagnosis, console: Console) -> None:
-    """Findings with their evidence and remedies, most useful first, and the forecast."""
-    for place, finding in enumerate(diagnosis.findings, start=1):
-        console.say()
-        console.sentence(f"{place}. {finding.statement}")
-        if finding.evidence:
-            evidence = [(name.replace("_", " "), value) for name, value in finding.evidence.items()]
-            console.table(("evidence", "value"), evidence, indent=5)
-        if where(finding):
-            console.say(f"   Seen in {where(finding)}.")
-        if finding.remedy is not None:
-            console.sentence(f"   Remedy: {finding.remedy.text}")
-            console.say(indent(finding.remedy.call, "     "))
-            if finding.remedy.result is not None:
-                console.sentence(f"   Tried: {finding.remedy.result.statement}")
-    if diagnosis.forecast is not None:
-        console.say()
-        console.sentence(diagnosis.forecast.statement)
-
-
-def where(finding: Finding) -> str:
-    """Rows and steps of a finding, in words; empty where it concerns the run as a whole."""
-    parts = []
-    if finding.rows:
-        lo, hi = min(finding.rows), max(finding.rows)
-        parts.append(f"rows {lo} to {hi} of H" if hi > lo else f"row {lo} of H")
-    # Every stretch of steps is given by its first and its last.
-    stretches = [f"{first} to {last}" for first, last in zip(finding.steps[::2], finding.steps[1::2], strict=False)]
-    if stretches:
-        parts.append(f"steps {', '.join(stretches)}")
-    return ", ".join(parts)
 
 
 def tabulate(result: Comparison, console: Console) -> None:

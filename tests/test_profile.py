@@ -254,6 +254,8 @@ def test_numbers_in_sentences() -> None:
     assert number(0.03456) == "0.0346"
     assert number(12.0) == "12"
     assert number(54321.0) == "54300"
+    assert number(-1789.0) == "−1790"
+    assert number(-0.25) == "−0.25"
     assert number(0.0) == "0"
     assert ten_to(400.2) == "10⁴⁰⁰"
 

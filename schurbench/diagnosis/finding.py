@@ -12,6 +12,7 @@ import numpy.typing as npt
 
 from schurbench.intake import WorkingMatrix
 from schurbench.prepare.plain import number, plain
+from schurbench.prepare.structure import scaled, times_power_of_two
 
 if TYPE_CHECKING:
     from schurbench.diagnosis.forecast import Forecast
@@ -199,9 +200,11 @@ class SolverRemedy:
         from schurbench.measures import residual_ratio
 
         began = time.perf_counter()
-        values, vectors = solve_structured(self.matrix.array, self.structure)
+        b, exponent = scaled(self.matrix.array)
+        values, vectors = _solve(b, self.structure)
         seconds = time.perf_counter() - began
-        error = residual_ratio(self.matrix.array, vectors, np.diag(values))
+        error = residual_ratio(b, vectors, np.diag(values))
+        values = times_power_of_two(values, -exponent)
         for array in (values, vectors):
             array.setflags(write=False)
         return StructuredSolution(values, vectors, seconds, error)
@@ -240,9 +243,16 @@ def solve_structured(matrix: Any, structure: str) -> tuple[npt.NDArray[Any], npt
     default, leaves vectors an order of magnitude less orthogonal (measured on cyclic matrices of order 100: 27 against
     0.8 in units of n·ulp).
     """
+    a: Any = matrix.array if isinstance(matrix, WorkingMatrix) else np.asarray(matrix)
+    b, exponent = scaled(a)
+    values, vectors = _solve(b, structure)
+    return times_power_of_two(values, -exponent), vectors
+
+
+def _solve(a: Any, structure: str) -> tuple[npt.NDArray[Any], npt.NDArray[Any]]:
+    """`solve_structured` for a matrix whose entries are at most 1, so that nothing overflows on the way."""
     import scipy.linalg
 
-    a: Any = matrix.array if isinstance(matrix, WorkingMatrix) else np.asarray(matrix)
     adjoint = a.conj().T
     if structure == "hermitian":
         values, vectors = scipy.linalg.eigh((a + adjoint) / 2, driver="evd", check_finite=False)

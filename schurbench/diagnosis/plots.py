@@ -66,7 +66,8 @@ def waiting_drawing(case: Case) -> str:
 def spectrum_drawing(case: Case) -> str:
     """Eigenvalues in the complex plane: discs where they converged, crosses where the iteration had not finished."""
     run = case.run
-    values = run.to_matrix_units(case.eigenvalues)
+    with np.errstate(over="ignore"):  # an eigenvalue may lie beyond the largest double; it is left out below
+        values = run.to_matrix_units(case.eigenvalues)
     done = _finished(case)
     kept = np.isfinite(values)
     values, done = values[kept], done[kept]

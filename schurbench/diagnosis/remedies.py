@@ -144,8 +144,8 @@ def _largest_movement(before: Run, after: Run) -> float:
     """Largest relative difference between the eigenvalues of two converged runs of one matrix, best paired."""
     from schurbench.matching import pair_spectra
 
-    first = before.to_matrix_units(before.ritz(len(before.steps)))
-    second = after.to_matrix_units(after.ritz(len(after.steps)))
+    # Both in working units, which only depend on the matrix: those of the matrix might overflow.
+    first, second = before.ritz(len(before.steps)), after.ritz(len(after.steps))
     order, distance = pair_spectra(first, second)
     size = np.maximum(np.abs(second[order]), np.abs(first))
     return float((distance[size > 0.0] / size[size > 0.0]).max(initial=0.0))

@@ -57,8 +57,9 @@ def number(value: float, digits: int = 3) -> str:
     mantissa, exponent = f"{value:.{digits - 1}e}".split("e")
     power = int(exponent)
     if -3 <= power < 5:
-        text = f"{value:.{digits}g}".replace("-", "−") if value < 0 else f"{value:.{digits}g}"
-        return f"{float(text):.0f}" if "e" in text else text
+        text = f"{abs(value):.{digits}g}"
+        text = f"{float(text):.0f}" if "e" in text else text
+        return f"−{text}" if value < 0 else text
     mantissa = mantissa.rstrip("0").rstrip(".") if "." in mantissa else mantissa
     raised = "10" + str(power).translate(_SUPERSCRIPTS)
     return {"1": raised, "-1": f"−{raised}"}.get(mantissa, f"{mantissa.replace('-', '−')}·{raised}")

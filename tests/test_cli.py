@@ -19,6 +19,7 @@ import scipy.io
 import scipy.optimize
 
 import schurbench as sb
+from schurbench.cli import console as console_module
 from schurbench.cli import main
 from schurbench.cli.options import COMMANDS, build_parser
 
@@ -567,6 +568,37 @@ def test_a_reader_that_goes_away_is_no_fault(data: Path) -> None:
         os.close(writing)
     assert result.returncode == 141
     assert result.stderr == ""
+
+
+class Terminal(io.StringIO):
+    def isatty(self) -> bool:
+        return True
+
+
+def test_progress_in_a_terminal_is_one_line_that_goes_away(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(console_module, "SECONDS_BETWEEN_REWRITES", 0.0)
+    out, err = io.StringIO(), Terminal()
+    console = console_module.Console(out, err)
+    show = console.progress(50)
+    for phase, sweeps in (("iterate", 3), ("iterate", 12), ("done", 20)):
+        show(sb.Progress(phase, sweeps, (0, 40), 10, 0.4, 1.25, 2.5))
+    console.say("result")
+    console.close()
+    written = err.getvalue()
+    assert "12 sweeps, 10 of 50 rows final" in written
+    assert "\n" not in written
+    # Whatever was last on the line is overwritten by blanks before the data are printed.
+    assert written.split("\r")[-2].strip() == ""
+    assert out.getvalue() == "result\n"
+
+
+def test_progress_in_a_file_is_an_occasional_line(monkeypatch: pytest.MonkeyPatch) -> None:
+    err = io.StringIO()
+    console = console_module.Console(io.StringIO(), err)
+    console.status("too soon")
+    monkeypatch.setattr(console_module, "SECONDS_BETWEEN_LINES", 0.0)
+    console.status("matrix 3 of 9")
+    assert err.getvalue() == "matrix 3 of 9\n"
 
 
 def test_output_survives_a_terminal_without_greek(data: Path) -> None:

@@ -127,9 +127,7 @@ class Iteration:
         self._kernels = (sweep, scan_up, deflate)
         start = self.preparation
         self._H: Array = start.H.copy()
-        self._Qh: Array = (
-            np.ascontiguousarray(start.Z.conj().T) if start.Z is not None else np.empty((0, self.n), dtype=start.H.dtype)
-        )
+        self._Qh: Array = start.Qh.copy()
         self._work = Workspace(self.n, self._H.dtype)
         self._real = self.settings.form == "real"
         self._norm = frobenius(self._H)
@@ -143,7 +141,7 @@ class Iteration:
         self._sweeps = 0
         self._measure_at = _ROUNDING_FIRST * max(10, self.n)
         self._stop: Stop | None = None
-        self._journal = Journal(self._H, self._Qh, self._window, self.settings.keep)
+        self._journal = Journal(start.H, start.Qh, self._window, self.settings.keep)
 
     @property
     def n(self) -> int:
@@ -250,7 +248,8 @@ class Iteration:
             stop=stop,
             phases=dict(self._phases),
             environment=environment(),
-            _final=(self._H.copy(), self._Qh.copy()),
+            # a finished iteration never changes its arrays again, so they need no copy
+            _final=(self._H, self._Qh) if self.done else (self._H.copy(), self._Qh.copy()),
         )
 
     def _step(self, began: float) -> Step:

@@ -26,7 +26,7 @@ class Journal:
     Parameters
     ----------
     H, Qh : (n, n) arrays
-        The state before the first step; copied.
+        The state before the first step; kept as it is, so it must not change.
     keep : int
         Bytes allowed for checkpoints, and again for the bands.
     """
@@ -41,7 +41,7 @@ class Journal:
         self.steps: list[Step] = []
         self.windows: list[Window] = [window]
         self.spacing = _FIRST_SPACING
-        self.checkpoints: dict[int, tuple[Array, Array]] = {0: (H.copy(), Qh.copy())}
+        self.checkpoints: dict[int, tuple[Array, Array]] = {0: (H, Qh)}
         self._state_bytes = H.nbytes + Qh.nbytes
         self._chunks: list[Array] = []
         self._banded = 0  # states whose bands are held: 0 … _banded−1

@@ -64,6 +64,7 @@ def save_run(run: Run, path: Path, *, replace: bool) -> Path:
             "labels": list(run.matrix.labels) if run.matrix.labels is not None else None,
             "notes": list(run.matrix.notes),
             "file_sha256": run.matrix.file_sha256,
+            "key": run.matrix.key,
             "sha256": run.matrix.sha256,
         },
         "settings": run.settings.to_dict(),
@@ -136,6 +137,7 @@ def open_run(path: str | Path) -> Run:
             labels=tuple(about["labels"]) if about["labels"] is not None else None,
             notes=tuple(about["notes"]),
             file_sha256=about["file_sha256"],
+            key=about["key"],
         )
         if matrix.sha256 != about["sha256"]:
             raise InputError(f"{path} is damaged: its matrix does not fit the recorded SHA-256; save the run again")
@@ -155,7 +157,7 @@ def open_run(path: str | Path) -> Run:
         about = text["preparation"]
         preparation = Preparation(
             H=start_H,
-            Z=np.ascontiguousarray(start_Qh.conj().T) if settings.accumulate else None,
+            Qh=start_Qh,
             D=arrays["D"],
             exponent=int(about["exponent"]),
             form=about["form"],

@@ -12,6 +12,7 @@ from schurbench.kernels.rotations import (
     make_rotation,
     reflect_right,
     reflect_rows,
+    reflect_rows_twice,
     rotate_right,
     rotate_rows,
 )
@@ -129,7 +130,11 @@ def double_shift_sweep(H, Qh, lo, hi, re1, im1, re2, im2, V, salt):
     H[k + 1, k + 1] -= w * v1
     reflect_right(H, lo, hi, V)
     if Qh.shape[0] > 0:
-        for k in range(lo, hi - 2):
+        k = lo
+        while k + 1 < hi - 2:
+            reflect_rows_twice(Qh, k, V[k, 0], V[k, 1], V[k, 2], V[k + 1, 0], V[k + 1, 1], V[k + 1, 2])
+            k += 2
+        if k < hi - 2:
             reflect_rows(Qh, k, 0, n, V[k, 0], V[k, 1], V[k, 2])
         for j in range(n):
             w = t * (Qh[hi - 2, j] + v1 * Qh[hi - 1, j])

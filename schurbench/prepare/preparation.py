@@ -30,7 +30,8 @@ class Preparation:
     ----------
     H : (n, n) ndarray, row-major, write-protected
         Upper Hessenberg with exact zeros below the subdiagonal; float64 or complex128 by form.
-    Z : (n, n) ndarray, write-protected, or None when it was not asked for
+    Qh : (n, n) ndarray, row-major, write-protected; no rows when Z was not asked for
+        Zᴴ, which is what the iteration works on.
     D : (n,) ndarray of float64
         Powers of two; all ones without scaling.
     exponent : int
@@ -47,13 +48,18 @@ class Preparation:
     """
 
     H: Array
-    Z: Array | None
+    Qh: Array
     D: npt.NDArray[np.float64]
     exponent: int
     form: str
     flip: bool
     permutation: npt.NDArray[np.int64]
     isolated: tuple[int, int]
+
+    @property
+    def Z(self) -> Array | None:
+        """Z, shape (n, n), or None when it was not asked for."""
+        return np.ascontiguousarray(self.Qh.conj().T) if len(self.Qh) else None
 
     def working(self, matrix: WorkingMatrix) -> Array:
         """The matrix that is iterated on, 2^exponent · D⁻¹ A D, shape (n, n)."""
@@ -107,18 +113,16 @@ def prepare(
         D = np.ones(n)
         if balance in ("scale", "both"):
             D[permutation[lo:hi]] = pivots[lo:hi]
-        H, Z = _gehrd(balanced, lo, hi, accumulate)
-    if Z is not None:
-        placed = np.empty_like(Z)
-        placed[permutation] = Z
-        Z = placed
+        H, Qh = _gehrd(balanced, lo, hi, accumulate)
+    if accumulate and not np.array_equal(permutation, np.arange(n)):
+        placed = np.empty_like(Qh)
+        placed[:, permutation] = Qh
+        Qh = placed
     if form == "complex":
-        H = H.astype(np.complex128, copy=False)
-        Z = Z.astype(np.complex128, copy=False) if Z is not None else None
-    for array in (H, Z, D, permutation):
-        if array is not None:
-            array.setflags(write=False)
-    return Preparation(H, Z, D, exponent, form, flip, permutation, (lo, hi))
+        H, Qh = H.astype(np.complex128, copy=False), Qh.astype(np.complex128, copy=False)
+    for array in (H, Qh, D, permutation):
+        array.setflags(write=False)
+    return Preparation(H, Qh, D, exponent, form, flip, permutation, (lo, hi))
 
 
 def _ldexp(a: Array, exponent: int) -> Array:
@@ -155,23 +159,25 @@ def _order_of_swaps(pivots: npt.NDArray[np.float64], lo: int, hi: int, n: int) -
     return order
 
 
-def _gehrd(a: Array, lo: int, hi: int, accumulate: bool) -> tuple[Array, Array | None]:
+def _gehrd(a: Array, lo: int, hi: int, accumulate: bool) -> tuple[Array, Array]:
+    """LAPACK gehrd and orghr; returns H and Qᴴ, both row-major, the latter without rows unless it is wanted."""
     from scipy.linalg import get_lapack_funcs
 
     n = a.shape[0]
     if n < 3:
-        return np.array(a, order="C"), (np.eye(n, dtype=a.dtype) if accumulate else None)
+        return np.array(a, order="C"), np.eye(n if accumulate else 0, n, dtype=a.dtype)
     gehrd, gehrd_lwork = get_lapack_funcs(("gehrd", "gehrd_lwork"), (a,))
     lwork = max(n, int(gehrd_lwork(n, lo=lo, hi=hi - 1)[0].real))
     packed, tau, _ = gehrd(a, lo=lo, hi=hi - 1, lwork=lwork)
-    H = np.ascontiguousarray(np.triu(packed, -1))
+    H = np.triu(np.ascontiguousarray(packed), -1)
     if not accumulate:
-        return H, None
+        return H, np.empty((0, n), dtype=a.dtype)
     name = "orghr" if a.dtype == np.float64 else "unghr"
     orghr, orghr_lwork = get_lapack_funcs((name, name + "_lwork"), (a,))
     lwork = max(n, int(orghr_lwork(n, lo=lo, hi=hi - 1)[0].real))
     Q, _ = orghr(packed, tau, lo=lo, hi=hi - 1, lwork=lwork, overwrite_a=1)
-    return H, np.ascontiguousarray(Q)
+    Qh = Q.T  # LAPACK's column-major Q is row-major Qᵀ as it stands
+    return H, np.conjugate(Qh, out=Qh) if np.iscomplexobj(Qh) else Qh
 
 
 @cache

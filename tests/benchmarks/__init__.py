@@ -1,0 +1,1 @@
+"""Measurements; run with ``python -m tests.benchmarks``. No test depends on a time."""

@@ -61,6 +61,14 @@ def close_moduli(n: int, gap: float, rng: np.random.Generator) -> np.ndarray:
     return x @ np.diag(values) @ np.linalg.inv(x)
 
 
+def hidden_jordan(n: int, k: int, rng: np.random.Generator) -> np.ndarray:
+    """A Jordan block of order k at 1 among well-separated real eigenvalues, orthogonally hidden."""
+    a = np.diag(np.concatenate([np.ones(k), 2.0 + np.arange(n - k) * rng.uniform(0.5, 1.5)]))
+    a[np.arange(k - 1), np.arange(1, k)] = 1.0
+    q = np.linalg.qr(gaussian(n, rng))[0]
+    return q @ a @ q.T
+
+
 def wildly_scaled(n: int, rng: np.random.Generator) -> np.ndarray:
     d = 10.0 ** rng.uniform(-5, 5, n)
     return gaussian(n, rng) / d[:, None] * d
@@ -168,6 +176,75 @@ def _centre(ball: object) -> float:
     return float(str(ball).strip("[]").split("+/-")[0])
 
 
+def companion(coefficients: np.ndarray) -> np.ndarray:
+    return scipy.linalg.companion(coefficients).astype(float)
+
+
+@pytest.mark.parametrize(("root", "power"), [(-1.0, 4), (-2.0, 4)])
+def test_companion_of_a_fourth_power_is_a_cluster_of_four(root: float, power: int) -> None:
+    # NA Digest 89:49 reports about 20 and 22 double-shift iterations to the first eigenvalue of these companions. The
+    # eigenvalue is defective of order 4, so rounding spreads it over a ring of about ε^(1/4).
+    run = sb.iterate(companion(np.poly([root] * power)))
+    finding = next(f for f in sb.diagnose(run).findings if f.cause == "clustered")
+    assert finding.evidence["members"] == 4
+    assert finding.evidence["centre_real"] == pytest.approx(root, abs=1e-9)
+    assert finding.evidence["centre_imaginary"] == pytest.approx(0.0, abs=1e-9)
+    ring = (2.0**-52) ** 0.25
+    assert 0.1 * ring < finding.evidence["measured_radius"] < 10 * ring * abs(root)
+    assert "mean" in finding.remedy.text
+
+
+def test_cluster_of_certified_companion_and_the_mean_its_remedy_returns() -> None:
+    # tests/data/README.md: certified/companion_cluster20.json has the exact eigenvalues of this very matrix.
+    with np.load(DATA / "companion_cluster20.npz") as archive:
+        matrix = archive["A"]
+    certified = json.loads((DATA / "certified" / "companion_cluster20.json").read_text())
+    exact = np.array([complex(_centre(re), _centre(im)) for re, im, count in certified for _ in range(int(count))])
+    run = sb.iterate(matrix)
+    finding = next(f for f in sb.diagnose(run).findings if f.cause == "clustered")
+    members = int(finding.evidence["members"])
+    centre = complex(finding.evidence["centre_real"], finding.evidence["centre_imaginary"])
+    nearest = exact[np.argsort(np.abs(exact - centre))[:members]]
+    single = pair_spectra(run.ritz(len(run.steps)), exact)[1].max()
+    assert abs(nearest.mean() - centre) < 1e-3 * single
+    factors = finding.remedy.run()
+    np.testing.assert_allclose(np.sort(np.abs(factors.eigenvalues[:members] - centre)) < 0.1, True)
+    namespace: dict = {"matrix": matrix, "schurbench": sb}
+    exec(finding.remedy.call, namespace)
+    np.testing.assert_array_equal(namespace["factors"].T, factors.T)
+
+
+def test_frank_matrix_is_non_normal_and_its_published_eigenvalues_lie_within_the_predicted_movement() -> None:
+    # Frank, n = 12: Wilkinson, The Algebraic Eigenvalue Problem; Golub & Wilkinson 1976 (table to 9 digits).
+    n = 12
+    i, j = np.indices((n, n))
+    frank = np.where(j >= i - 1, n - np.maximum(i, j), 0).astype(float)
+    larger = [32.2288915, 20.1989886, 12.3110774, 6.96153309, 3.51185595, 1.55398871]
+    smaller = [0.643505319, 0.284749721, 0.143646520, 0.0812276592, 0.0495074292, 0.0310280606]
+    published = np.array([*larger, *smaller])
+    run = sb.iterate(frank)
+    findings = sb.diagnose(run).findings
+    assert [f.cause for f in findings] == ["non-normal", "healthy"]
+    movements = Case(run).movements
+    values = run.ritz(len(run.steps))
+    order, distance = pair_spectra(values, published)
+    digits = 1e-8 * published[order]  # what the table itself leaves open
+    assert np.all(distance <= 10 * movements + digits)
+    assert findings[0].evidence["largest_condition_number"] > 1e7
+    assert findings[0].evidence["predicted_movement_by_rounding"] > 1e-8
+
+
+def test_condition_numbers_against_their_definition() -> None:
+    rng = np.random.default_rng(14)
+    for form in ("real", "complex"):
+        run = sb.iterate(gaussian(25, rng), form=form)
+        case = Case(run)
+        values, left, right = scipy.linalg.eig(run.matrix.array, left=True, right=True)
+        expected = 1.0 / np.abs((left.conj() * right).sum(axis=0))
+        order = pair_spectra(case.eigenvalues, values)[0]
+        np.testing.assert_allclose(case.conditions, expected[order], rtol=1e-8)
+
+
 # --- planted mechanisms -------------------------------------------------------------------------------------------
 
 PLANTED = {
@@ -194,6 +271,7 @@ PLANTED = {
     ),
     "wild scaling": ("poor-scaling", wildly_scaled, {}),
     "wild scaling, complex form": ("poor-scaling", wildly_scaled, {"strategy": "wilkinson"}),
+    "hidden Jordan block": ("clustered", lambda n, rng: hidden_jordan(n, 5, rng), {}),
     "symmetric": ("structure-unused", lambda n, rng: (lambda a: a + a.T)(gaussian(n, rng)), {}),
     "orthogonal": ("structure-unused", lambda n, rng: np.linalg.qr(gaussian(n, rng))[0], {}),
 }
@@ -213,10 +291,19 @@ def test_planted_causes_are_named_first(name: str) -> None:
 def test_healthy_runs_are_called_healthy(settings: dict) -> None:
     rng = np.random.default_rng(4)
     found = Counter()
+    blamed = 0
     for i in range(120):
         a = gaussian(int(rng.integers(3, 50)), rng)
-        found[first_cause(np.triu(a, -1) if i % 2 else a, **settings)] += 1
-    assert found["healthy"] >= 118, found
+        if i % 2:
+            # Random Hessenberg matrices are exponentially non-normal, so eigenvalues may be called ill-determined;
+            # the iteration on them is healthy all the same.
+            findings = sb.diagnose(sb.iterate(np.triu(a, -1), **settings)).findings
+            blamed += findings[0].rank is Rank.ITERATION
+            assert findings[0].cause in ("healthy", "non-normal", "clustered", "unexplained", "slow-ratio")
+        else:
+            found[first_cause(a, **settings)] += 1
+    assert found["healthy"] >= 59, found
+    assert blamed <= 1
 
 
 def test_complex_matrix_with_rayleigh_shifts_is_healthy() -> None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from schurbench.diagnosis.diagnose import diagnose
 from schurbench.diagnosis.finding import (
+    ClusterRemedy,
     Diagnosis,
     Finding,
     Rank,
@@ -15,6 +16,7 @@ from schurbench.diagnosis.finding import (
 from schurbench.diagnosis.forecast import Forecast
 
 __all__ = [
+    "ClusterRemedy",
     "Diagnosis",
     "Finding",
     "Forecast",

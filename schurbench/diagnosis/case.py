@@ -12,15 +12,21 @@ import numpy.typing as npt
 
 from schurbench.diagnosis.figures import HealthyFigures, healthy_figures
 from schurbench.journal import Deflation, DeflationKind, StopReason
+from schurbench.matching import pair_spectra
+from schurbench.measures import ULP
+from schurbench.prepare.preparation import single_blas_thread
 from schurbench.prepare.profile import Profile, profile_of
 
 if TYPE_CHECKING:
     from schurbench.journal import Run
 
-__all__ = ["Case", "Decay", "Stretch"]
+__all__ = ["ILL_CONDITIONED", "Case", "Cluster", "Decay", "Stretch"]
 
 Real = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
+
+#: Condition number from which an eigenvalue may count as ill-determined; Gaussian matrices of order 100 reach some 100.
+ILL_CONDITIONED = 1e4
 
 #: States looked at in one stretch; more would cost time and change no slope.
 _SAMPLES = 160
@@ -28,11 +34,17 @@ _SAMPLES = 160
 #: Stretches examined in one run, the longest first.
 _EXAMINED = 6
 
-#: Share of the run, and least seconds, that the diagnosis may cost; eigenvalues of an unfinished window are only
-#: computed when they are expected to fit in (LAPACK needs about 1.2e-9·n³ s for them without vectors, real form, on
-#: the machine of `schurbench.prepare.estimate`, and 4 times that in complex form).
+#: Share of the run, and least seconds, that one costly part of the diagnosis may take. Eigenvalues of an unfinished
+#: window, and condition numbers, are only computed when they are expected to fit in. LAPACK needs about 1.2e-9·n³ s
+#: for eigenvalues without vectors in real form and 4 times that in complex form, and 1.3e-9·n³ s for the left and right
+#: vectors of a triangular matrix in either (n = 100 to 500, the machine of `schurbench.prepare.estimate`).
 _SHARE, _LEAST = 0.05, 0.05
 _EIGENVALUES_COST = {"real": 1.2e-9, "complex": 5e-9}
+_CONDITIONS_COST = 1.3e-9
+
+#: Two eigenvalues are one cluster when they lie within so many of the distances by which rounding moves each of them,
+#: and within this share of their size (else a chain of neighbours would link a whole badly conditioned spectrum).
+_LINK, _NEAR = 3.0, 0.02
 
 
 @dataclass(frozen=True, slots=True)
@@ -63,6 +75,31 @@ class Stretch:
     def rows(self) -> int:
         """Rows of the window."""
         return self.window[1] - self.window[0]
+
+
+@dataclass(frozen=True, slots=True)
+class Cluster:
+    """Eigenvalues that rounding cannot tell apart.
+
+    Attributes
+    ----------
+    rows : tuple of int
+        Their rows of H, ascending.
+    centre : complex
+        Their mean, in working units.
+    radius : float
+        Largest distance of a member from it.
+    condition : float
+        Largest condition number 1/s of a member.
+    movement : float
+        The distance by which rounding, ulp·‖H‖, moves such an eigenvalue to first order.
+    """
+
+    rows: tuple[int, ...]
+    centre: complex
+    radius: float
+    condition: float
+    movement: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -184,12 +221,78 @@ class Case:
         H = self.run.state(last).H
         cuts = np.flatnonzero(np.diagonal(H, -1) == 0.0) + 1
         edges = [0, *(int(c) for c in cuts), self.run.n]
-        allowed = max(_LEAST, _SHARE * self.run.seconds) / _EIGENVALUES_COST[self.run.settings.form]
+        cost = _EIGENVALUES_COST[self.run.settings.form]
         for lo, hi in itertools.pairwise(edges):
             if hi - lo > 1:
-                fits = (hi - lo) ** 3 <= allowed
-                values[lo:hi] = scipy.linalg.eigvals(H[lo:hi, lo:hi], check_finite=False) if fits else np.nan
+                fits = self._fits(cost, hi - lo)
+                with single_blas_thread():
+                    values[lo:hi] = scipy.linalg.eigvals(H[lo:hi, lo:hi], check_finite=False) if fits else np.nan
         return values
+
+    def _fits(self, cost: float, n: int) -> bool:
+        """Whether work of ``cost``·n³ seconds fits in the budget."""
+        return cost * n**3 <= max(_LEAST, _SHARE * self.run.seconds)
+
+    @cached_property
+    def conditions(self) -> Real | None:
+        """Condition number 1/s(λ) of every eigenvalue, in row order; None for an unfinished run or a large matrix.
+
+        s(λ) = |yᴴx| of the unit left and right eigenvectors (Wilkinson 1965, chapter 2, section 8), of H in its final
+        form; no similarity by an orthogonal matrix changes it.
+        """
+        import scipy.linalg
+
+        if not self.run.converged or not self._fits(_CONDITIONS_COST, self.run.n):
+            return None
+        final = self.run.state(len(self.run.steps)).H
+        with single_blas_thread():
+            result: Any = scipy.linalg.eig(final, left=True, right=True, check_finite=False)
+        values, left, right = result
+        overlap = np.abs((left.conj() * right).sum(axis=0))
+        condition = 1.0 / np.maximum(overlap, np.finfo(np.float64).tiny)
+        if np.abs(values - self.eigenvalues).max(initial=0.0) > 100.0 * ULP * self.run.norm:
+            # LAPACK returns the eigenvalues of a triangular matrix in the order of its diagonal unless it permutes.
+            condition = condition[pair_spectra(self.eigenvalues, values)[0]]
+        return np.asarray(condition)
+
+    @cached_property
+    def movements(self) -> Real | None:
+        """The distance by which rounding, ulp·‖H‖, moves each eigenvalue to first order, in working units."""
+        return None if self.conditions is None else ULP * self.run.norm * self.conditions
+
+    @cached_property
+    def clusters(self) -> tuple[Cluster, ...]:
+        """Groups of two or more eigenvalues that rounding cannot tell apart, the largest first.
+
+        Isolated from each other by rounding means: closer than a few times the distance that rounding moves each, so
+        exactly multiple eigenvalues that are well conditioned are no cluster here.
+        """
+        if self.conditions is None or self.movements is None:
+            return ()
+        from scipy.sparse import csr_array
+        from scipy.sparse.csgraph import connected_components
+
+        values, movements = self.eigenvalues, self.movements
+        distance = np.abs(values[:, None] - values[None, :])
+        reach = _LINK * np.minimum(movements[:, None], movements[None, :])
+        size = np.maximum(np.abs(values[:, None]), np.abs(values[None, :]))
+        ill = self.conditions >= ILL_CONDITIONED
+        linked = (distance <= reach) & (distance <= _NEAR * size) & ill[:, None] & ill[None, :]
+        _, labels = connected_components(csr_array(linked.astype(np.int8)), directed=False)
+        found = []
+        for label in np.flatnonzero(np.bincount(labels) > 1):
+            rows = np.flatnonzero(labels == label)
+            centre = complex(values[rows].mean())
+            found.append(
+                Cluster(
+                    rows=tuple(int(row) for row in rows),
+                    centre=centre,
+                    radius=float(np.abs(values[rows] - centre).max()),
+                    condition=float(self.conditions[rows].max()),
+                    movement=float(movements[rows].max()),
+                )
+            )
+        return tuple(sorted(found, key=lambda cluster: (-len(cluster.rows), -cluster.condition)))
 
     def known(self, stretch: Stretch) -> bool:
         """Whether the eigenvalues of the window of a stretch are known."""

@@ -35,7 +35,11 @@ def diagnose(run: Run, try_remedies: bool = False) -> Diagnosis:
     """
     began = time.perf_counter()
     case = Case(run)
-    findings = [*_iteration_findings(case), *(f for cause in RUN_CAUSES if (f := cause.finding(case)) is not None)]
+    findings = _iteration_findings(case)
+    for cause in RUN_CAUSES:
+        finding = cause.finding(case)
+        if finding is not None and finding.cause not in [known.cause for known in findings]:
+            findings.append(finding)
     if try_remedies:
         findings = [try_remedy(case, finding) for finding in findings]
     findings.sort(key=_order)

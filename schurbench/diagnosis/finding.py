@@ -16,9 +16,11 @@ from schurbench.prepare.structure import scaled, times_power_of_two
 
 if TYPE_CHECKING:
     from schurbench.diagnosis.forecast import Forecast
+    from schurbench.factors import Factors
     from schurbench.journal import Run
 
 __all__ = [
+    "ClusterRemedy",
     "Diagnosis",
     "Finding",
     "Rank",
@@ -74,7 +76,7 @@ class RemedyResult:
 
 
 class Remedy(Protocol):
-    """What a finding proposes. `SettingsRemedy` and `SolverRemedy` are the two kinds."""
+    """What a finding proposes. `SettingsRemedy`, `SolverRemedy` and `ClusterRemedy` are its kinds."""
 
     @property
     def text(self) -> str:
@@ -148,6 +150,65 @@ class SettingsRemedy:
             "call": self.call,
             "result": self.result.to_dict() if self.result else None,
         }
+
+
+@dataclass(frozen=True, slots=True)
+class ClusterRemedy:
+    """The mean and the invariant subspace of a cluster instead of its single members.
+
+    Attributes
+    ----------
+    text : str
+    source : Run
+        The run whose factors are reordered.
+    again : str
+        The call that repeats it.
+    centre : complex
+        Mean of the cluster, with non-negative imaginary part for a real matrix, in the units of the matrix.
+    radius : float
+        All members lie within it, and nothing else is meant to.
+    result : None
+        There is nothing to compare: the remedy changes what is used, not how it is computed.
+    """
+
+    text: str
+    source: Run = field(repr=False)
+    again: str
+    centre: complex
+    radius: float
+    result: None = None
+
+    @property
+    def settings(self) -> dict[str, Any]:
+        """Empty: this remedy is no iteration."""
+        return {}
+
+    @property
+    def call(self) -> str:
+        """Python lines that need nothing but ``matrix``."""
+        value = "value.real + abs(value.imag) * 1j" if self._folded else "value"
+        return (
+            f"run = {self.again}\n"
+            f"factors = run.factors().reorder(lambda value: abs({value} - ({self.centre!r})) <= {self.radius!r})\n"
+            f"# the leading columns of factors.Z span the invariant subspace of the cluster"
+        )
+
+    @property
+    def _folded(self) -> bool:
+        return self.source.settings.form == "real"
+
+    def run(self) -> Factors:
+        """Factors of the run with the cluster (and in real form its conjugate) at the top."""
+
+        def member(value: complex) -> bool:
+            folded = complex(value.real, abs(value.imag)) if self._folded else complex(value)
+            return abs(folded - self.centre) <= self.radius
+
+        return self.source.factors().reorder(member)
+
+    def to_dict(self) -> dict[str, Any]:
+        """JSON-ready dictionary."""
+        return {"text": self.text, "settings": {}, "changes": [], "call": self.call, "result": None}
 
 
 @dataclass(frozen=True, slots=True, eq=False)

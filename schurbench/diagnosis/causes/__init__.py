@@ -10,8 +10,10 @@ most one thing.
 from __future__ import annotations
 
 from schurbench.diagnosis.causes.base import Judgement, RunCause, StretchCause
+from schurbench.diagnosis.causes.clustered import Clustered, ClusteredEigenvalues
 from schurbench.diagnosis.causes.equal_moduli import EqualModuli
 from schurbench.diagnosis.causes.healthy import Healthy
+from schurbench.diagnosis.causes.non_normal import NonNormal
 from schurbench.diagnosis.causes.poor_scaling import PoorScaling
 from schurbench.diagnosis.causes.real_shift_on_pair import RealShiftOnPair
 from schurbench.diagnosis.causes.reducible import Reducible
@@ -22,6 +24,14 @@ from schurbench.diagnosis.causes.unexplained import unexplained
 
 __all__ = ["RUN_CAUSES", "STRETCH_CAUSES", "Judgement", "RunCause", "StretchCause", "unexplained"]
 
-STRETCH_CAUSES: tuple[StretchCause, ...] = (RealShiftOnPair(), EqualModuli(), SlowRatio())
+STRETCH_CAUSES: tuple[StretchCause, ...] = (RealShiftOnPair(), EqualModuli(), Clustered(), SlowRatio())
 
-RUN_CAUSES: tuple[RunCause, ...] = (StoppedEarly(), PoorScaling(), StructureUnused(), Reducible(), Healthy())
+RUN_CAUSES: tuple[RunCause, ...] = (
+    StoppedEarly(),
+    PoorScaling(),
+    ClusteredEigenvalues(),
+    NonNormal(),
+    StructureUnused(),
+    Reducible(),
+    Healthy(),
+)

@@ -309,7 +309,9 @@ class Iteration:
                 "the strategy proposed complex shifts that are no conjugate pair; return a pair or use form='complex'"
             )
         if self._real and len(values) == 2 and values[0].imag != 0.0 and values[0].real != values[1].real:
-            raise SettingsError("the strategy proposed two complex shifts that are not conjugate; return a conjugate pair")
+            raise SettingsError(
+                "the strategy proposed two complex shifts that are not conjugate; return a conjugate pair"
+            )
         largest = max(abs(v) for v in values)
         if largest > _LARGEST_SHIFT * self._norm:
             raise SettingsError(
@@ -509,7 +511,9 @@ def _resolve(
             "wilkinson shifts of a real matrix that is not symmetric may be complex; use form='complex' or strategy 'francis'"
         )
     if real and isinstance(policy, Given) and policy.form == "complex":
-        raise SettingsError("the given shifts are not closed under conjugation; add the conjugates or use form='complex'")
+        raise SettingsError(
+            "the given shifts are not closed under conjugation; add the conjugates or use form='complex'"
+        )
     deflation_test(deflation)
     if tol is not None and not (isinstance(tol, (int, float)) and 0.0 <= tol < float("inf")):
         raise SettingsError(f"tol {tol!r} is no level; give a number of at least 0, or None for rounding level")

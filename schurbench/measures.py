@@ -6,6 +6,8 @@ Both ratios are those of LAPACK's own test programs (Reference-LAPACK, TESTING/E
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 import numpy.typing as npt
 
@@ -20,7 +22,8 @@ RATIO_LIMIT = 20.0
 #: Smallest positive double; the rounding unit cannot fall below it, however small the matrix.
 _TINIEST = 2.0**-1074
 
-Array = npt.NDArray[np.float64] | npt.NDArray[np.complex128]
+#: float64 or complex128. Not written as their union, because numpy's type stubs widen it at every operation.
+Array = npt.NDArray[Any]
 
 
 def norm1(a: Array) -> float:
@@ -67,7 +70,7 @@ def residual_ratio(a: Array, z: Array, t: Array) -> float:
         unit = ULP
     elif e > 0:
         unit = max(unit, float(np.ldexp(_TINIEST, min(e, 2000))))
-    return residual / (n * unit)
+    return float(residual / (n * unit))
 
 
 def orthogonality_ratio(z: Array) -> float:
@@ -75,7 +78,7 @@ def orthogonality_ratio(z: Array) -> float:
     n = z.shape[0]
     if n == 0:
         return 0.0
-    return norm1(z.conj().T @ z - np.eye(n)) / (n * ULP)
+    return float(norm1(z.conj().T @ z - np.eye(n)) / (n * ULP))
 
 
 def _ldexp(a: Array, e: int) -> Array:

@@ -75,7 +75,10 @@ def test_lapack_types_large(n: int, complex_: bool) -> None:
         for strategy in REAL_STRATEGIES:
             for balance in ("permute", "both"):
                 run = sb.iterate(
-                    sb.load(a, name=name), strategy=strategy, balance=balance, limit=None if strategy[0] in "fw" else 300
+                    sb.load(a, name=name),
+                    strategy=strategy,
+                    balance=balance,
+                    limit=None if strategy[0] in "fw" else 300,
                 )
                 check(run, must_converge=strategy in ("francis", "wilkinson"))
 

@@ -6,7 +6,6 @@ from collections.abc import Iterable
 from copy import copy
 
 import numpy as np
-import numpy.typing as npt
 
 from schurbench.journal.records import DeflationKind, Step, Window
 from schurbench.measures import Array
@@ -82,10 +81,11 @@ class Journal:
         """States whose bands are in memory, 0 … held−1; later ones are rebuilt by replay."""
         return self._banded
 
-    def bands(self, k: int) -> npt.NDArray[np.generic]:
+    def bands(self, k: int) -> Array:
         """Diagonal, subdiagonal and superdiagonal of H after step k, shape (3, n); the last two end with 0."""
         if k < self._banded:
-            return self._chunks[k // _CHUNK][k % _CHUNK]
+            held: Array = self._chunks[k // _CHUNK][k % _CHUNK]
+            return held
         H, _ = self.rebuild(k)
         out = np.empty((3, self.n), dtype=H.dtype)
         self._copy_bands(H, out)
@@ -109,7 +109,7 @@ class Journal:
         self._walk = (k, H, Qh)
         return H, Qh
 
-    def all_bands(self) -> npt.NDArray[np.generic]:
+    def all_bands(self) -> Array:
         """Bands of every state held in memory, shape (states, 3, n)."""
         if not self._chunks:
             return np.empty((0, 3, self.n))

@@ -9,6 +9,8 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from schurbench.measures import Array
+
 __all__ = [
     "Deflation",
     "DeflationKind",
@@ -25,8 +27,6 @@ __all__ = [
 
 #: Half-open range of rows ``(lo, hi)``; always explicit, never "from lo to hi inclusive".
 Window = tuple[int, int]
-
-Array = npt.NDArray[np.float64] | npt.NDArray[np.complex128]
 
 
 class StepKind(StrEnum):

@@ -116,7 +116,7 @@ class Run:
 
     def diagonal(self, k: int) -> Array:
         """Diagonal of H after step k, shape (n,)."""
-        return self._bands(k)[0].copy()
+        return np.array(self._bands(k)[0])
 
     def superdiagonal(self, k: int) -> Array:
         """Entries h[i, i+1] after step k, shape (n−1,)."""
@@ -133,7 +133,7 @@ class Run:
         block upward wherever their 2×2 block has complex eigenvalues; all other rows give their diagonal entry.
         """
         diagonal, sub, sup = self._bands(k)
-        values = diagonal.astype(np.complex128)
+        values: npt.NDArray[np.complex128] = diagonal.astype(np.complex128)
         if self.settings.form == "complex":
             return values
         half = (diagonal[:-1] - diagonal[1:]) / 2
@@ -233,7 +233,7 @@ class Run:
             "environment": self.environment,
         }
 
-    def _bands(self, k: int) -> Any:
+    def _bands(self, k: int) -> Array:
         return self.journal.bands(self._checked(k))
 
     def _checked(self, k: int) -> int:

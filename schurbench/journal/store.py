@@ -149,7 +149,9 @@ def open_run(path: str | Path) -> Run:
             )
         }
         windows = [(int(lo), int(hi)) for lo, hi in arrays["windows"]]
-        journal = Journal.from_parts(_steps(arrays, settings.deflation), windows, checkpoints, arrays["bands"], settings.keep)
+        journal = Journal.from_parts(
+            _steps(arrays, settings.deflation), windows, checkpoints, arrays["bands"], settings.keep
+        )
         journal.spacing = int(text["spacing"])
         if len(windows) != len(journal.steps) + 1 or 0 not in checkpoints:
             raise InputError(f"{path} is damaged: its steps and windows do not match; save the run again")
@@ -171,7 +173,14 @@ def open_run(path: str | Path) -> Run:
             (int(text["stop"]["window"][0]), int(text["stop"]["window"][1])),
         )
         return Run(
-            matrix, settings, preparation, journal, stop, text["phases"], text["environment"], (arrays["H"], arrays["Qh"])
+            matrix,
+            settings,
+            preparation,
+            journal,
+            stop,
+            text["phases"],
+            text["environment"],
+            (arrays["H"], arrays["Qh"]),
         )
     except InputError:
         raise

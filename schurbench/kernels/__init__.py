@@ -48,7 +48,10 @@ def warm() -> dict[str, float]:
         work = Workspace(5, H.dtype)
         bands = np.zeros((3, 5), dtype=dtype)
         calls: list[tuple[str, Any]] = [
-            ("single-shift step", lambda H=H, Qh=Qh, w=work: single_shift_step(H, Qh, 0, 5, H.dtype.type(1.0), w.C, w.S, 1)),
+            (
+                "single-shift step",
+                lambda H=H, Qh=Qh, w=work: single_shift_step(H, Qh, 0, 5, H.dtype.type(1.0), w.C, w.S, 1),
+            ),
             ("scan", lambda H=H: scan_up(H, 0, 5, 1, -1.0, 10.0)),
             ("bands", lambda H=H, b=bands: copy_bands(H, b)),
         ]

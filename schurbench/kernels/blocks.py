@@ -4,8 +4,6 @@ from __future__ import annotations
 
 import math
 
-import numpy as np
-
 from schurbench.kernels._jit import compiled
 
 __all__ = ["copy_bands", "deflation_threshold", "scan_up", "standardise_pair"]

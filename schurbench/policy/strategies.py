@@ -13,9 +13,9 @@ from collections.abc import Sequence
 from typing import Any, Protocol, runtime_checkable
 
 import numpy as np
-import numpy.typing as npt
 
 from schurbench.errors import SettingsError
+from schurbench.measures import Array
 
 __all__ = [
     "STRATEGIES",
@@ -28,8 +28,6 @@ __all__ = [
     "Zero",
     "strategy_for",
 ]
-
-Array = npt.NDArray[np.float64] | npt.NDArray[np.complex128]
 
 
 class WindowView:
@@ -179,7 +177,9 @@ class Given:
         try:
             self.values = tuple(complex(v) for v in values)
         except (TypeError, ValueError):
-            raise SettingsError("the shifts given are not a list of numbers; pass for example shifts=[1.0, 2.5]") from None
+            raise SettingsError(
+                "the shifts given are not a list of numbers; pass for example shifts=[1.0, 2.5]"
+            ) from None
         if not self.values:
             raise SettingsError("strategy 'given' needs at least one shift; pass shifts=[...]")
         if not all(cmath.isfinite(v) for v in self.values):
@@ -223,7 +223,9 @@ STRATEGIES = ("auto", "zero", "rayleigh", "wilkinson", "francis", "given")
 _SIMPLE: dict[str, type] = {"zero": Zero, "rayleigh": Rayleigh, "wilkinson": Wilkinson, "francis": Francis}
 
 
-def strategy_for(strategy: str | ShiftStrategy, *, real: bool, shifts: Sequence[complex] | None = None) -> ShiftStrategy:
+def strategy_for(
+    strategy: str | ShiftStrategy, *, real: bool, shifts: Sequence[complex] | None = None
+) -> ShiftStrategy:
     """Turn the ``strategy`` keyword into an object.
 
     Parameters
@@ -253,8 +255,12 @@ def strategy_for(strategy: str | ShiftStrategy, *, real: bool, shifts: Sequence[
             made: ShiftStrategy = _SIMPLE[strategy]()
             return made
         if strategy == "multishift":
-            raise SettingsError("strategy 'multishift' is not in this version; use 'francis' (real) or 'wilkinson' (complex)")
-        raise SettingsError(f"strategy {strategy!r} is unknown; choose one of {', '.join(STRATEGIES)}, or pass an object")
+            raise SettingsError(
+                "strategy 'multishift' is not in this version; use 'francis' (real) or 'wilkinson' (complex)"
+            )
+        raise SettingsError(
+            f"strategy {strategy!r} is unknown; choose one of {', '.join(STRATEGIES)}, or pass an object"
+        )
     if not callable(getattr(strategy, "shifts", None)):
         raise SettingsError(
             f"strategy of type {type(strategy).__name__} has no shifts(view) method; see schurbench.policy.ShiftStrategy"

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cache
-from typing import Any
+from typing import Any, cast
 
 import numpy as np
 import numpy.typing as npt
@@ -136,15 +136,20 @@ def _working_exponent(a: Array) -> int:
     return exponent if abs(exponent) > _LARGEST_EXPONENT else 0
 
 
+def _lapack(name: str, a: Array) -> Any:
+    """LAPACK routine by its name without the type letter, for the type of a."""
+    from scipy.linalg import get_lapack_funcs
+
+    (routine,) = cast("list[Any]", get_lapack_funcs((name,), (a,)))
+    return routine
+
+
 def _gebal(a: Array, *, permute: bool, scale: bool) -> tuple[Array, int, int, npt.NDArray[np.float64]]:
     """LAPACK gebal; returns the balanced matrix, the half-open active range, and its record of swaps and scales."""
     n = a.shape[0]
     if not (permute or scale):
         return a, 0, n, np.ones(n)
-    from scipy.linalg import get_lapack_funcs
-
-    (gebal,) = get_lapack_funcs(("gebal",), (a,))
-    balanced, lo, hi, pivots, info = gebal(a, scale=scale, permute=permute)
+    balanced, lo, hi, pivots, info = _lapack("gebal", a)(a, scale=scale, permute=permute)
     if info != 0:
         raise SettingsError(f"LAPACK gebal refused the matrix (info = {info}); try balance='none'")
     return balanced, int(lo), int(hi) + 1, pivots
@@ -161,21 +166,17 @@ def _order_of_swaps(pivots: npt.NDArray[np.float64], lo: int, hi: int, n: int) -
 
 def _gehrd(a: Array, lo: int, hi: int, accumulate: bool) -> tuple[Array, Array]:
     """LAPACK gehrd and orghr; returns H and Qᴴ, both row-major, the latter without rows unless it is wanted."""
-    from scipy.linalg import get_lapack_funcs
-
     n = a.shape[0]
     if n < 3:
         return np.array(a, order="C"), np.eye(n if accumulate else 0, n, dtype=a.dtype)
-    gehrd, gehrd_lwork = get_lapack_funcs(("gehrd", "gehrd_lwork"), (a,))
-    lwork = max(n, int(gehrd_lwork(n, lo=lo, hi=hi - 1)[0].real))
-    packed, tau, _ = gehrd(a, lo=lo, hi=hi - 1, lwork=lwork)
+    lwork = max(n, int(_lapack("gehrd_lwork", a)(n, lo=lo, hi=hi - 1)[0].real))
+    packed, tau, _ = _lapack("gehrd", a)(a, lo=lo, hi=hi - 1, lwork=lwork)
     H = np.triu(np.ascontiguousarray(packed), -1)
     if not accumulate:
         return H, np.empty((0, n), dtype=a.dtype)
     name = "orghr" if a.dtype == np.float64 else "unghr"
-    orghr, orghr_lwork = get_lapack_funcs((name, name + "_lwork"), (a,))
-    lwork = max(n, int(orghr_lwork(n, lo=lo, hi=hi - 1)[0].real))
-    Q, _ = orghr(packed, tau, lo=lo, hi=hi - 1, lwork=lwork, overwrite_a=1)
+    lwork = max(n, int(_lapack(f"{name}_lwork", a)(n, lo=lo, hi=hi - 1)[0].real))
+    Q, _ = _lapack(name, a)(packed, tau, lo=lo, hi=hi - 1, lwork=lwork, overwrite_a=1)
     Qh = Q.T  # LAPACK's column-major Q is row-major Qᵀ as it stands
     return H, np.conjugate(Qh, out=Qh) if np.iscomplexobj(Qh) else Qh
 

@@ -46,8 +46,7 @@ def times_power_of_two(a: Array, exponent: int | npt.NDArray[np.int64]) -> Array
 
 def scaled(a: Array) -> tuple[Array, int]:
     """The array brought to a largest part in [1/2, 1) by an exact power of two, and that exponent."""
-    rows = cast(Array, np.ascontiguousarray(a))
-    exponent = power_of_two_exponent(rows)
+    exponent = power_of_two_exponent(np.ascontiguousarray(a))
     return times_power_of_two(a, exponent), exponent
 
 

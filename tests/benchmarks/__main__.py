@@ -1,8 +1,8 @@
 """Whole recorded runs with Z against scipy.linalg.schur on the same matrix, in one process, alternating, medians.
 
-    python -m tests.benchmarks                      sizes 50 … 500, printed
-    python -m tests.benchmarks --sizes 200 1000     other sizes
-    python -m tests.benchmarks --write              also into tests/benchmarks/results.md, with date and machine
+python -m tests.benchmarks                      sizes 50 … 500, printed
+python -m tests.benchmarks --sizes 200 1000     other sizes
+python -m tests.benchmarks --write              also into tests/benchmarks/results.md, with date and machine
 """
 
 from __future__ import annotations

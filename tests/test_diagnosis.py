@@ -234,6 +234,22 @@ def test_frank_matrix_is_non_normal_and_its_published_eigenvalues_lie_within_the
     assert findings[0].evidence["predicted_movement_by_rounding"] > 1e-8
 
 
+@pytest.mark.parametrize("settings", [{}, {"strategy": "wilkinson"}])
+def test_multiple_eigenvalues_of_normal_matrices_are_not_called_ill_determined(settings: dict) -> None:
+    rng = np.random.default_rng(15)
+    for values in ([0.0] * 19 + [1.0], [1.0] * 10 + [2.0] * 10, [1.0] * 3 + [5.0] * 17, list(range(10)) * 2):
+        q = np.linalg.qr(gaussian(20, rng))[0]
+        causes = [f.cause for f in sb.diagnose(sb.iterate(q * values @ q.T, **settings)).findings]
+        assert "clustered" not in causes
+        assert "non-normal" not in causes
+        x = gaussian(20, rng)
+        causes = [f.cause for f in sb.diagnose(sb.iterate(x * values @ np.linalg.inv(x), **settings)).findings]
+        assert "clustered" not in causes
+    causes = [f.cause for f in sb.diagnose(sb.iterate(np.ones((20, 20)), **settings)).findings]
+    assert "structure-unused" in causes
+    assert not {"clustered", "non-normal"} & set(causes)
+
+
 def test_condition_numbers_against_their_definition() -> None:
     rng = np.random.default_rng(14)
     for form in ("real", "complex"):

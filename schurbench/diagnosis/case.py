@@ -46,6 +46,10 @@ _CONDITIONS_COST = 1.3e-9
 #: and within this share of their size (else a chain of neighbours would link a whole badly conditioned spectrum).
 _LINK, _NEAR = 3.0, 0.02
 
+#: A cluster no wider than so many times the rounding level of the norm is a multiple eigenvalue with enough
+#: eigenvectors: whatever its condition numbers say, its members are right to 13 digits of the norm.
+_HARMLESS = 1e3
+
 
 @dataclass(frozen=True, slots=True)
 class Stretch:
@@ -245,6 +249,9 @@ class Case:
         if not self.run.converged or not self._fits(_CONDITIONS_COST, self.run.n):
             return None
         final = self.run.state(len(self.run.steps)).H
+        # Entries under rounding level are not known; left in, they would make multiple eigenvalues of a normal matrix
+        # look defective, because there such an entry stands over a difference that is as small.
+        final = np.where(np.abs(final) > ULP * self.run.norm, final, np.diag(np.diagonal(final)))
         with single_blas_thread():
             result: Any = scipy.linalg.eig(final, left=True, right=True, check_finite=False)
         values, left, right = result
@@ -283,11 +290,14 @@ class Case:
         for label in np.flatnonzero(np.bincount(labels) > 1):
             rows = np.flatnonzero(labels == label)
             centre = complex(values[rows].mean())
+            radius = float(np.abs(values[rows] - centre).max())
+            if 0.0 < radius <= _HARMLESS * ULP * self.run.norm:
+                continue
             found.append(
                 Cluster(
                     rows=tuple(int(row) for row in rows),
                     centre=centre,
-                    radius=float(np.abs(values[rows] - centre).max()),
+                    radius=radius,
                     condition=float(self.conditions[rows].max()),
                     movement=float(movements[rows].max()),
                 )

@@ -13,6 +13,7 @@ from schurbench.measures import ULP, norm1
 from schurbench.prepare import structure
 from schurbench.prepare.estimate import Estimate, estimate
 from schurbench.prepare.plain import number, plain, plural, ten_to
+from schurbench.prepare.preparation import single_blas_thread
 
 __all__ = ["EXACT_DEPARTURE_ORDER", "Profile", "profile", "profile_of", "rounding_level"]
 
@@ -195,7 +196,15 @@ def profile(matrix: Any) -> Profile:
 
 
 def profile_of(matrix: WorkingMatrix, *, exact_departure: bool) -> Profile:
-    """`profile` with a say on whether the departure from normality may cost a Schur form."""
+    """`profile` with a say on whether the departure from normality may cost a Schur form.
+
+    Runs with one BLAS thread, as preparation does: the same numbers on every machine, and no collapse on a busy one.
+    """
+    with single_blas_thread():
+        return _profile_of(matrix, exact_departure)
+
+
+def _profile_of(matrix: WorkingMatrix, exact_departure: bool) -> Profile:
     import scipy.linalg
 
     a = matrix.array

@@ -122,13 +122,12 @@ class Iteration:
         self.preparation = prepare(self.matrix, self.settings.form, balance, flip, accumulate)
         self._phases = {"reduce": time.perf_counter() - began, "iterate": 0.0}
 
-        from schurbench.kernels import Workspace, deflate, scan_up, sweep
+        from schurbench.kernels import Workspace, deflate, scan, split, sweep
 
-        self._kernels = (sweep, scan_up, deflate)
-        start = self.preparation
-        self._H: Array = start.H.copy()
-        self._Qh: Array = start.Qh.copy()
-        self._work = Workspace(self.n, self._H.dtype)
+        self._kernels = (sweep, scan, deflate)
+        self._H: Array = split(self.preparation.H)
+        self._Qh: Array = split(self.preparation.Qh)
+        self._work = Workspace(self._H)
         self._real = self.settings.form == "real"
         self._norm = frobenius(self._H)
         self._test = deflation_test(deflation)
@@ -141,7 +140,7 @@ class Iteration:
         self._sweeps = 0
         self._measure_at = _ROUNDING_FIRST * max(10, self.n)
         self._stop: Stop | None = None
-        self._journal = Journal(start.H, start.Qh, self._window, self.settings.keep)
+        self._journal = Journal(self._H.copy(), self._Qh.copy(), self._window, self.settings.keep)
 
     @property
     def n(self) -> int:
@@ -151,12 +150,16 @@ class Iteration:
     @property
     def H(self) -> Array:
         """Copy of the current H, in working units."""
-        return self._H.copy()
+        from schurbench.kernels import join
+
+        return join(self._H)
 
     @property
     def Z(self) -> Array | None:
         """Copy of the current Z, or None when it is not accumulated."""
-        return np.ascontiguousarray(self._Qh.conj().T) if self.settings.accumulate else None
+        from schurbench.kernels import join
+
+        return np.ascontiguousarray(join(self._Qh).conj().T) if self.settings.accumulate else None
 
     @property
     def window(self) -> Window:
@@ -322,11 +325,11 @@ class Iteration:
 
     def _scan(self, index: int, out: list[Deflation], *, before: bool) -> None:
         """Split off whatever is negligible at the bottom of the window, and move the window up."""
-        _, scan_up, deflate = self._kernels
+        _, scan, deflate = self._kernels
         H, Qh, name = self._H, self._Qh, self._test.name
         lo, hi = self._window
         while hi > 0:
-            row, magnitude, threshold = scan_up(H, lo, hi, self._test.code, self._tol, self._norm)
+            row, magnitude, threshold = scan(H, (lo, hi), self._test.code, self._tol, self._norm)
             size = hi - row
             if size == 1 or (size == 2 and self._real):
                 values = deflate(H, Qh, row, size)
@@ -350,12 +353,13 @@ class Iteration:
         if self._sweeps < self._measure_at or not self.settings.accumulate:
             return False
         self._measure_at = self._sweeps + _ROUNDING_EVERY * max(10, self.n)
-        Z = self._Qh.conj().T
+        Z = self.Z
+        assert Z is not None  # accumulated, as just checked
         with single_blas_thread():
             return (
                 max(
                     orthogonality_ratio(Z),
-                    residual_ratio(self.preparation.working(self.matrix), Z, self._H),
+                    residual_ratio(self.preparation.working(self.matrix), Z, self.H),
                 )
                 > 0.5 * RATIO_LIMIT
             )

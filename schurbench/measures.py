@@ -36,8 +36,7 @@ def frobenius(a: Array) -> float:
 
     Summed without BLAS: a threaded dot product costs milliseconds of waking up and its last bit depends on the threads.
     """
-    parts = np.ascontiguousarray(a).view(np.float64)
-    return float(np.sqrt(np.square(parts).sum()))
+    return float(np.sqrt(np.square(np.ascontiguousarray(a).view(np.float64)).sum()))
 
 
 def power_of_two_exponent(a: Array) -> int:

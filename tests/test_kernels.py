@@ -6,16 +6,9 @@ import numpy as np
 import pytest
 import scipy.linalg
 
-from schurbench.kernels import (
-    Workspace,
-    copy_bands,
-    double_shift_sweep,
-    make_rotation,
-    scan_up,
-    single_shift_step,
-    standardise_pair,
-)
-from schurbench.kernels.rotations import make_reflector
+from schurbench.kernels import Workspace, bands, join, scan, split, sweep
+from schurbench.kernels.blocks import standardise_pair
+from schurbench.kernels.rotations import make_reflector, make_rotation
 from schurbench.measures import ULP
 from tests.gallery import matched_distance
 
@@ -45,8 +38,10 @@ def test_single_shift_step_is_rq_plus_shift(dtype: type, n: int, lo: int, hi: in
         if 0 < edge < n:
             H0[edge, edge - 1] = 0.0
     shift = dtype(0.3 if dtype is float else 0.3 - 0.7j)
-    H, Qh, work = H0.copy(), np.eye(n, dtype=dtype), Workspace(n, H0.dtype)
-    rotations = single_shift_step(H, Qh, lo, hi, shift, work.C, work.S, 1)
+    planes, Qh = split(H0), split(np.eye(n, dtype=dtype))
+    work = Workspace(planes)
+    rotations = sweep(planes, Qh, work, (lo, hi), (shift,), 1)
+    H, Qh, S = join(planes), join(Qh), join(work.S[..., None, :])[0]
 
     assert rotations == hi - lo - 1
     # Hessenberg form is kept exactly, and so are the zeros at the window's edges
@@ -55,7 +50,7 @@ def test_single_shift_step_is_rq_plus_shift(dtype: type, n: int, lo: int, hi: in
         if 0 < edge < n:
             assert H[edge, edge - 1] == 0.0
     # Qᴴ H Q = the next H, with Q multiplied out from the recorded rotations
-    Q = q_of_rotations(n, lo, hi, work.C, work.S)
+    Q = q_of_rotations(n, lo, hi, work.C, S)
     np.testing.assert_allclose(Qh, Q.conj().T, atol=20 * ULP)
     np.testing.assert_allclose(H, Q.conj().T @ H0 @ Q, atol=40 * n * ULP)
     # and Q is the Q of H − σI = QR: QᴴH − σQᴴ is upper triangular in the window
@@ -72,9 +67,9 @@ def test_double_shift_sweep_equals_two_explicit_steps(n: int, lo: int, hi: int, 
     for edge in (lo, hi):
         if 0 < edge < n:
             H0[edge, edge - 1] = 0.0
-    H, Qh, work = H0.copy(), np.eye(n), Workspace(n, H0.dtype)
+    H, Qh = H0.copy(), np.eye(n)
     first, second = map(complex, pair)
-    reflectors = double_shift_sweep(H, Qh, lo, hi, first.real, first.imag, second.real, second.imag, work.V, 1)
+    reflectors = sweep(H, Qh, Workspace(H), (lo, hi), (first, second), 1)
 
     assert reflectors == hi - lo - 1
     assert not np.tril(H, -2).any()
@@ -180,26 +175,26 @@ def test_deflation_tests_differ_where_they_should() -> None:
     H = np.diag([1.0, 1e-8, 1e-14]) + np.diag([1e-3, 1e-10], 1)
     H[1, 0], H[2, 1] = 1e-5, 1e-17
     norm = float(np.linalg.norm(H))
-    assert scan_up(H, 0, 3, 2, -1.0, norm)[0] == 2  # 1e-17 is below ulp·‖H‖
-    assert scan_up(H, 0, 3, 0, -1.0, norm)[0] == 0
-    assert scan_up(H, 0, 3, 1, -1.0, norm)[0] == 0
+    assert scan(H, (0, 3), 2, -1.0, norm)[0] == 2  # 1e-17 is below ulp·‖H‖
+    assert scan(H, (0, 3), 0, -1.0, norm)[0] == 0
+    assert scan(H, (0, 3), 1, -1.0, norm)[0] == 0
     # Ahues–Tisseur refuses what the neighbour test accepts when the opposite entry is large
     G = np.array([[1.0, 1e6], [1e-16, 1.0 + 1e-9]])
-    assert scan_up(G, 0, 2, 0, -1.0, 1e6)[0] == 1
-    assert scan_up(G, 0, 2, 1, -1.0, 1e6)[0] == 0
+    assert scan(G, (0, 2), 0, -1.0, 1e6)[0] == 1
+    assert scan(G, (0, 2), 1, -1.0, 1e6)[0] == 0
     # magnitude and threshold tell the decision
-    row, magnitude, threshold = scan_up(G, 0, 2, 0, -1.0, 1e6)
+    row, magnitude, threshold = scan(G, (0, 2), 0, -1.0, 1e6)
     assert (row, magnitude) == (1, 1e-16)
     assert magnitude <= threshold == pytest.approx(ULP * (2.0 + 1e-9))
     # an absolute tolerance replaces rounding level
-    assert scan_up(G, 0, 2, 0, 1e-20, 1e6)[0] == 0
-    assert scan_up(G, 0, 2, 2, 1e-15, 1e6)[0] == 1
+    assert scan(G, (0, 2), 0, 1e-20, 1e6)[0] == 0
+    assert scan(G, (0, 2), 2, 1e-15, 1e6)[0] == 1
 
 
 def test_bands() -> None:
     H = hessenberg(6, complex, seed=2)
     out = np.empty((3, 6), dtype=complex)
-    copy_bands(H, out)
+    bands(split(H), out)
     assert np.array_equal(out[0], np.diag(H))
     assert np.array_equal(out[1, :5], np.diag(H, -1))
     assert np.array_equal(out[2, :5], np.diag(H, 1))
@@ -209,10 +204,23 @@ def test_reference_spectrum_after_many_steps() -> None:
     """Two hundred arbitrary steps change no eigenvalue beyond rounding: LAPACK through scipy is the reference."""
     H = hessenberg(12, complex, seed=5)
     before = scipy.linalg.eigvals(H)
-    work = Workspace(12, H.dtype)
-    Qh = np.eye(12, dtype=complex)
+    planes = split(H)
+    Qh = np.empty((2, 0, 12))
+    work = Workspace(planes)
     rng = np.random.default_rng(0)
-    for _ in range(200):
-        single_shift_step(H, Qh, 0, 12, complex(*rng.standard_normal(2)), work.C, work.S, 1)
-    after = scipy.linalg.eigvals(H)
+    for k in range(200):
+        sweep(planes, Qh, work, (0, 12), (complex(*rng.standard_normal(2)),), k)
+    after = scipy.linalg.eigvals(join(planes))
     assert matched_distance(after, before).max() < 1e-11
+
+
+def test_complex_scan_agrees_with_the_real_one() -> None:
+    """The two scans read different layouts but are one rule."""
+    rng = np.random.default_rng(4)
+    for _ in range(50):
+        H = np.triu(rng.standard_normal((7, 7)) * 10.0 ** rng.integers(-9, 9, (7, 7)), -1)
+        H[rng.integers(1, 7), :] *= 1e-14
+        for test in range(3):
+            real = scan(H, (0, 7), test, -1.0, float(np.linalg.norm(H)))
+            planes = split(H.astype(complex))
+            assert scan(planes, (0, 7), test, -1.0, float(np.linalg.norm(H))) == pytest.approx(real, rel=1e-15)

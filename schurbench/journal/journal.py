@@ -24,18 +24,18 @@ class Journal:
 
     Parameters
     ----------
-    H, Qh : (n, n) arrays
+    H, Qh : arrays in the kernels' layout
         The state before the first step; kept as it is, so it must not change.
     keep : int
         Bytes allowed for checkpoints, and again for the bands.
     """
 
     def __init__(self, H: Array, Qh: Array, window: Window, keep: int) -> None:
-        from schurbench.kernels import copy_bands  # not before a run begins
+        from schurbench.kernels import bands  # not before a run begins
 
-        n = H.shape[0]
-        self._copy_bands = copy_bands
-        self.n = n
+        self._copy_bands = bands
+        self.n = H.shape[-1]
+        self.band_type = np.dtype(np.float64 if H.ndim == 2 else np.complex128)
         self.keep = keep
         self.steps: list[Step] = []
         self.windows: list[Window] = [window]
@@ -45,7 +45,7 @@ class Journal:
         self._chunks: list[Array] = []
         self._banded = 0  # states whose bands are held: 0 … _banded−1
         self._walk: tuple[int, Array, Array] | None = None  # the last state rebuilt, so that walking forward is cheap
-        self._band_bytes = 3 * n * H.itemsize
+        self._band_bytes = 3 * self.n * self.band_type.itemsize
         self._keep_bands(H)
 
     def add(self, step: Step, H: Array, Qh: Array, window: Window) -> None:
@@ -63,7 +63,7 @@ class Journal:
         if slot == 0:
             if self._chunks and len(self._chunks) * _CHUNK * self._band_bytes >= self.keep:
                 return  # later bands are rebuilt by replay when someone asks
-            self._chunks.append(np.empty((_CHUNK, 3, self.n), dtype=H.dtype))
+            self._chunks.append(np.empty((_CHUNK, 3, self.n), dtype=self.band_type))
         self._copy_bands(H, self._chunks[-1][slot])
         self._banded += 1
 
@@ -87,12 +87,12 @@ class Journal:
             held: Array = self._chunks[k // _CHUNK][k % _CHUNK]
             return held
         H, _ = self.rebuild(k)
-        out = np.empty((3, self.n), dtype=H.dtype)
+        out = np.empty((3, self.n), dtype=self.band_type)
         self._copy_bands(H, out)
         return out
 
     def rebuild(self, k: int) -> tuple[Array, Array]:
-        """H and Zᴴ after step k, bit for bit as the run had them; the caller may keep but not change them."""
+        """H and Zᴴ after step k in the kernels' layout, bit for bit; the caller may keep but not change them."""
         from schurbench.kernels import Workspace
 
         start = max(i for i in self.checkpoints if i <= k)
@@ -103,7 +103,7 @@ class Journal:
         if start == k:
             return H, Qh
         H, Qh = H.copy(), Qh.copy()
-        work = Workspace(self.n, H.dtype)
+        work = Workspace(H)
         for step in self.steps[start:k]:
             replay_step(H, Qh, work, step)
         self._walk = (k, H, Qh)
@@ -112,7 +112,7 @@ class Journal:
     def all_bands(self) -> Array:
         """Bands of every state held in memory, shape (states, 3, n)."""
         if not self._chunks:
-            return np.empty((0, 3, self.n))
+            return np.empty((0, 3, self.n), dtype=self.band_type)
         return np.concatenate(self._chunks)[: self._banded]
 
     def snapshot(self) -> Journal:

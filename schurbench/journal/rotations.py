@@ -26,7 +26,7 @@ class Rotations(Sequence[Rotation]):
     """
 
     def __init__(self, journal: Journal, step: Step) -> None:
-        from schurbench.kernels import Workspace, deflate, single_shift_step, sweep
+        from schurbench.kernels import Workspace, deflate, join, sweep
 
         H, Qh = journal.rebuild(step.index - 1)
         H, Qh = H.copy(), Qh.copy()
@@ -34,10 +34,10 @@ class Rotations(Sequence[Rotation]):
             if deflation.before_sweep:
                 deflate(H, Qh, deflation.row, 0 if deflation.kind is DeflationKind.SPLIT else deflation.size)
         self.step = step
-        self._start = H.copy()
+        self._start = join(H)
         lo, hi = step.window
-        work = Workspace(journal.n, H.dtype)
-        none = np.empty((0, journal.n), dtype=H.dtype)
+        work = Workspace(H)
+        none = Qh[..., :0, :]
         acts: list[tuple[int, str, Array, complex]] = []  # row, side, G, shift to subtract before or add after
         if step.kind is StepKind.DOUBLE:
             sweep(H, none, work, step.window, step.shifts, step.index)
@@ -46,11 +46,12 @@ class Rotations(Sequence[Rotation]):
                 acts.append((k, "both", np.eye(len(v)) - work.V[k, 0] * np.outer(v, v), 0.0))
         elif step.shifts:
             for shift in step.shifts:
-                typed = float(shift.real) if H.dtype == np.float64 else complex(shift)
-                single_shift_step(H, none, lo, hi, typed, work.C, work.S, step.index)
+                typed = shift.real if H.ndim == 2 else shift
+                sweep(H, none, work, step.window, (shift,), step.index)
+                S = join(work.S[..., None, :])[0]
                 for side in ("left", "right"):
                     for k in range(lo, hi - 1):
-                        c, s = work.C[k], work.S[k]
+                        c, s = work.C[k], S[k]
                         edge = (side == "left" and k == lo) or (side == "right" and k == hi - 2)
                         acts.append((k, side, np.array([[c, s], [-np.conj(s), c]]), typed if edge else 0.0))
         self._acts = acts

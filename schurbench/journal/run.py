@@ -53,7 +53,7 @@ class Run:
     stop: Stop
     phases: dict[str, float]
     environment: dict[str, Any]
-    _final: tuple[Array, Array]
+    _final: tuple[Array, Array]  # H and Zᴴ in the kernels' layout
 
     def __repr__(self) -> str:
         return f"<Run of {self.settings.strategy} on {self.matrix.name}, n = {self.n}: {self.stop.message}>"
@@ -158,9 +158,11 @@ class Run:
             k is not a step of this run.
         """
         k = self._checked(k)
-        H, Qh = self._final if k == len(self.steps) else self.journal.rebuild(k)
-        H = H.copy()
-        Z = np.ascontiguousarray(Qh.conj().T) if self.settings.accumulate else None
+        from schurbench.kernels import join
+
+        planes, Qh = self._final if k == len(self.steps) else self.journal.rebuild(k)
+        H = join(planes)
+        Z = np.ascontiguousarray(join(Qh).conj().T) if self.settings.accumulate else None
         for array in (H, Z):
             if array is not None:
                 array.setflags(write=False)

@@ -155,7 +155,9 @@ def open_run(path: str | Path) -> Run:
         journal.spacing = int(text["spacing"])
         if len(windows) != len(journal.steps) + 1 or 0 not in checkpoints:
             raise InputError(f"{path} is damaged: its steps and windows do not match; save the run again")
-        start_H, start_Qh = checkpoints[0]
+        from schurbench.kernels import join
+
+        start_H, start_Qh = map(join, checkpoints[0])
         about = text["preparation"]
         preparation = Preparation(
             H=start_H,

@@ -7,26 +7,26 @@ first call; `warm` compiles everything ahead and leaves it in numba's on-disk ca
 from __future__ import annotations
 
 import time
-from typing import Any
+from collections.abc import Callable
+from functools import partial
 
 import numpy as np
 
-from schurbench.kernels.blocks import copy_bands, scan_up, standardise_pair
-from schurbench.kernels.engine import deflate, sweep
-from schurbench.kernels.rotations import make_rotation
-from schurbench.kernels.sweeps import double_shift_sweep, single_shift_step
+from schurbench.kernels.blocks import deflation_threshold
+from schurbench.kernels.engine import bands, deflate, scan, sweep
+from schurbench.kernels.planes import join, split
+from schurbench.kernels.sweeps import single_shift_step
 from schurbench.kernels.workspace import Workspace
 
 __all__ = [
     "Workspace",
+    "bands",
     "cache_directory",
-    "copy_bands",
     "deflate",
-    "double_shift_sweep",
-    "make_rotation",
-    "scan_up",
-    "single_shift_step",
-    "standardise_pair",
+    "deflation_threshold",
+    "join",
+    "scan",
+    "split",
     "sweep",
     "warm",
 ]
@@ -41,28 +41,25 @@ def warm() -> dict[str, float]:
         Seconds spent on each kernel; nearly nothing where the cache already held it.
     """
     spent: dict[str, float] = {}
-    for dtype in (np.float64, np.complex128):
-        kind = "real" if dtype == np.float64 else "complex"
-        H = np.triu(np.arange(1.0, 26.0).reshape(5, 5), -1).astype(dtype)
-        Qh = np.eye(5, dtype=dtype)
-        work = Workspace(5, H.dtype)
-        bands = np.zeros((3, 5), dtype=dtype)
-        calls: list[tuple[str, Any]] = [
-            (
-                "single-shift step",
-                lambda H=H, Qh=Qh, w=work: single_shift_step(H, Qh, 0, 5, H.dtype.type(1.0), w.C, w.S, 1),
-            ),
-            ("scan", lambda H=H: scan_up(H, 0, 5, 1, -1.0, 10.0)),
-            ("bands", lambda H=H, b=bands: copy_bands(H, b)),
+    for kind in ("real", "complex"):
+        start = np.triu(np.arange(1.0, 26.0).reshape(5, 5), -1)
+        H = split(start if kind == "real" else start * (1.0 + 0.5j))
+        Qh = split(np.eye(5) if kind == "real" else np.eye(5, dtype=complex))
+        out = np.zeros((3, 5), dtype=float if kind == "real" else complex)
+        work = Workspace(H)
+        calls: list[tuple[str, Callable[[], object]]] = [
+            ("single-shift step", partial(sweep, H, Qh, work, (0, 5), (1.0,), 1)),
+            ("scan", partial(scan, H, (0, 5), 1, -1.0, 10.0)),
+            ("bands", partial(bands, H, out)),
         ]
-        if dtype == np.float64:
+        if kind == "real":
             calls += [
-                (
-                    "double-shift sweep",
-                    lambda H=H, Qh=Qh, w=work: double_shift_sweep(H, Qh, 0, 5, 1.0, 1.0, 1.0, -1.0, w.V, 1),
-                ),
-                ("2×2 blocks", lambda H=H, Qh=Qh: standardise_pair(H, Qh, 3)),
+                ("double-shift sweep", partial(sweep, H, Qh, work, (0, 5), (1.0 + 1.0j, 1.0 - 1.0j), 2)),
+                ("2×2 blocks", partial(deflate, H, Qh, 3, 2)),
             ]
+        calls.append(
+            ("threshold", partial(deflation_threshold, out[0, 0], out[0, 1], 1.0, 1.0, 1.0, 1.0, 1, -1.0, 1.0))
+        )
         for name, call in calls:
             began = time.perf_counter()
             call()

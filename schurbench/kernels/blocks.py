@@ -6,40 +6,56 @@ import math
 
 from schurbench.kernels._jit import compiled
 
-__all__ = ["copy_bands", "deflation_threshold", "scan_up", "standardise_pair"]
+__all__ = [
+    "copy_bands",
+    "copy_bands_complex",
+    "deflation_threshold",
+    "scan_up",
+    "scan_up_complex",
+    "standardise_pair",
+]
 
 ULP = 2.0**-52
 TINY = 2.0**-1022 / ULP  # below this an entry has lost digits to underflow and carries no information
 
 
 @compiled
-def deflation_threshold(H, k, test, tol, norm):
-    """Largest |h[k, k−1]| that the deflation test accepts; test 0 neighbour, 1 ahues-tisseur, 2 norm; tol < 0 for default.
+def deflation_threshold(a, d, low, up, before, after, test, tol, norm):
+    """Largest |h[k, k−1]| that a deflation test accepts.
 
     Neighbour: Wilkinson's |h| ≤ ulp (|h₁₁| + |h₂₂|) (Golub & Van Loan, 4th ed., §7.5.1). Ahues–Tisseur: additionally
     |h₂₁||h₁₂| ≤ ulp |h₂₂||h₁₁ − h₂₂|, both scaled (Ahues & Tisseur, LAPACK Working Note 122, 1997). Norm: |h| ≤ ulp ‖H‖_F.
+
+    Parameters
+    ----------
+    a, d : float or complex
+        Diagonal entries h[k−1, k−1] and h[k, k].
+    low, up : float
+        |h[k, k−1]| and |h[k−1, k]|.
+    before, after : float
+        |h[k−1, k−2]| and |h[k+1, k]|, 0 where they do not exist.
+    test : int
+        0 neighbour, 1 ahues-tisseur, 2 norm.
+    tol : float
+        Absolute level that replaces rounding level; negative for the default.
+    norm : float
+        Frobenius norm of H.
     """
-    n = H.shape[0]
     if test == 2:
         return tol if tol >= 0.0 else max(TINY, ULP * norm)
-    h11, h22 = abs(H[k - 1, k - 1]), abs(H[k, k])
-    size = h11 + h22
+    size = abs(a) + abs(d)
     if size == 0.0:
         # both neighbours vanish: judge by the next subdiagonal entries, then by the norm
-        if k >= 2:
-            size += abs(H[k - 1, k - 2])
-        if k + 1 < n:
-            size += abs(H[k + 1, k])
+        size = before + after
         if size == 0.0:
             size = norm
     first = tol if tol >= 0.0 else max(TINY, ULP * size)
     if test == 0:
         return first
     eps = first / size if size > 0.0 else ULP
-    low, up = abs(H[k, k - 1]), abs(H[k - 1, k])
-    gap = abs(H[k - 1, k - 1] - H[k, k])
+    gap = abs(a - d)
     big, small = max(low, up), min(low, up)
-    wide, narrow = max(h22, gap), min(h22, gap)
+    wide, narrow = max(abs(d), gap), min(abs(d), gap)
     total = wide + big
     if total == 0.0 or up == 0.0:
         return first
@@ -53,20 +69,46 @@ def deflation_threshold(H, k, test, tol, norm):
 
 @compiled
 def scan_up(H, lo, hi, test, tol, norm):
-    """Row of the lowest negligible subdiagonal entry in [lo, hi), looking upward.
+    """Row of the lowest negligible subdiagonal entry in [lo, hi), looking upward; parameters as above.
 
     Returns
     -------
     row, magnitude, threshold : int, float, float
         ``row = lo`` when no entry h[k, k−1] with lo < k < hi is negligible.
     """
+    n = H.shape[0]
     for k in range(hi - 1, lo, -1):
-        magnitude = abs(H[k, k - 1])
-        if magnitude == 0.0:
-            return k, 0.0, deflation_threshold(H, k, test, tol, norm)
-        threshold = deflation_threshold(H, k, test, tol, norm)
-        if magnitude <= threshold:
-            return k, magnitude, threshold
+        low = abs(H[k, k - 1])
+        before = abs(H[k - 1, k - 2]) if k >= 2 else 0.0
+        after = abs(H[k + 1, k]) if k + 1 < n else 0.0
+        threshold = deflation_threshold(H[k - 1, k - 1], H[k, k], low, abs(H[k - 1, k]), before, after, test, tol, norm)
+        if low <= threshold:
+            return k, low, threshold
+    return lo, 0.0, 0.0
+
+
+@compiled
+def scan_up_complex(H, lo, hi, test, tol, norm):
+    """The same for a complex H in planes, shape (2, n, n)."""
+    R, I = H[0], H[1]
+    n = R.shape[0]
+    for k in range(hi - 1, lo, -1):
+        low = math.hypot(R[k, k - 1], I[k, k - 1])
+        before = math.hypot(R[k - 1, k - 2], I[k - 1, k - 2]) if k >= 2 else 0.0
+        after = math.hypot(R[k + 1, k], I[k + 1, k]) if k + 1 < n else 0.0
+        threshold = deflation_threshold(
+            complex(R[k - 1, k - 1], I[k - 1, k - 1]),
+            complex(R[k, k], I[k, k]),
+            low,
+            math.hypot(R[k - 1, k], I[k - 1, k]),
+            before,
+            after,
+            test,
+            tol,
+            norm,
+        )
+        if low <= threshold:
+            return k, low, threshold
     return lo, 0.0, 0.0
 
 
@@ -160,5 +202,19 @@ def copy_bands(H, out):
         out[1, i] = H[i + 1, i]
         out[2, i] = H[i, i + 1]
     out[0, n - 1] = H[n - 1, n - 1]
+    out[1, n - 1] = 0.0
+    out[2, n - 1] = 0.0
+
+
+@compiled
+def copy_bands_complex(H, out):
+    """The same for a complex H in planes; ``out`` is complex, (3, n)."""
+    R, I = H[0], H[1]
+    n = R.shape[0]
+    for i in range(n - 1):
+        out[0, i] = complex(R[i, i], I[i, i])
+        out[1, i] = complex(R[i + 1, i], I[i + 1, i])
+        out[2, i] = complex(R[i, i + 1], I[i, i + 1])
+    out[0, n - 1] = complex(R[n - 1, n - 1], I[n - 1, n - 1])
     out[1, n - 1] = 0.0
     out[2, n - 1] = 0.0

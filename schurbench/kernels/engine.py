@@ -1,6 +1,6 @@
-"""Carry out what was decided: one sweep by its shifts, one deflation by its row. Shared by the iteration and by replay.
+"""Carry out what was decided on a matrix in the kernels' own layout (see `planes`): one sweep, one scan, one deflation.
 
-Replay gives the same bytes as the run because both go through these two functions and nothing else changes H.
+Shared by the iteration and by replay, which gives the same bytes because nothing else changes H.
 """
 
 from __future__ import annotations
@@ -9,11 +9,17 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from schurbench.kernels.blocks import standardise_pair
-from schurbench.kernels.sweeps import double_shift_sweep, single_shift_step
+from schurbench.kernels.blocks import (
+    copy_bands,
+    copy_bands_complex,
+    scan_up,
+    scan_up_complex,
+    standardise_pair,
+)
+from schurbench.kernels.sweeps import double_shift_sweep, single_shift_step, single_shift_step_complex
 from schurbench.kernels.workspace import Workspace
 
-__all__ = ["deflate", "sweep"]
+__all__ = ["bands", "deflate", "scan", "sweep"]
 
 
 def sweep(
@@ -25,15 +31,22 @@ def sweep(
     single-shift steps on a complex one. ``index`` is that of the step, by which last bits are rounded in turn.
     """
     lo, hi = window
-    if H.dtype == np.float64:
+    if H.ndim == 2:
         if len(shifts) == 2:
             first, second = shifts
             return double_shift_sweep(H, Qh, lo, hi, first.real, first.imag, second.real, second.imag, work.V, index)
-        return single_shift_step(H, Qh, lo, hi, float(shifts[0].real), work.C, work.S, index)
+        return single_shift_step(H, Qh, lo, hi, shifts[0].real, work.C, work.S, index)
     rotations = 0
     for shift in shifts:
-        rotations += single_shift_step(H, Qh, lo, hi, complex(shift), work.C, work.S, index)
+        rotations += single_shift_step_complex(H, Qh, lo, hi, complex(shift), work.C, work.S, index)
     return rotations
+
+
+def scan(H: np.ndarray, window: tuple[int, int], test: int, tol: float, norm: float) -> tuple[int, float, float]:
+    """Row, magnitude and threshold of the lowest negligible subdiagonal entry; see `blocks.scan_up`."""
+    lo, hi = window
+    look = scan_up if H.ndim == 2 else scan_up_complex
+    return look(H, lo, hi, test, tol, norm)
 
 
 def deflate(H: np.ndarray, Qh: np.ndarray, row: int, size: int) -> tuple[complex, ...]:
@@ -47,8 +60,18 @@ def deflate(H: np.ndarray, Qh: np.ndarray, row: int, size: int) -> tuple[complex
         1 or 2 for a finished block (2 only on a real H); 0 for a split of the window.
     """
     if row > 0:
-        H[row, row - 1] = 0.0
+        H[..., row, row - 1] = 0.0
     if size == 2:
         re1, im1, re2, im2 = standardise_pair(H, Qh, row)
         return (complex(re1, im1), complex(re2, im2))
-    return (complex(H[row, row]),) if size == 1 else ()
+    if size == 1:
+        return (complex(*H[..., row, row]) if H.ndim == 3 else complex(H[row, row]),)
+    return ()
+
+
+def bands(H: np.ndarray, out: np.ndarray) -> None:
+    """Copy diagonal, subdiagonal and superdiagonal of H into ``out``; see `blocks.copy_bands`."""
+    if H.ndim == 2:
+        copy_bands(H, out)
+    else:
+        copy_bands_complex(H, out)

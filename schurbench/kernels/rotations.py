@@ -2,7 +2,7 @@
 
 Conventions, the same in every kernel:
 
-- H is row-major and so is ``Qh = Zᴴ``; both are multiplied by G from the left, which touches contiguous rows.
+- H is row-major and so is ``Qh = Zᴴ``, complex ones as two planes (see `planes`); both are multiplied by G from the left, which touches contiguous rows.
 - A plane rotation is G = [c, s; −s̄, c] with real c, chosen so that G [f; g] = [r; 0] (Golub & Van Loan, Matrix
   Computations, 4th ed., §5.1.8 and, for the complex case, §5.1.13).
 - A reflector is G = I − t·[1, v₁, v₂]ᵀ[1, v₁, v₂] (§5.1.2), stored as (t, v₁, v₂).
@@ -26,7 +26,9 @@ __all__ = [
     "reflect_rows",
     "reflect_rows_twice",
     "rotate_right",
+    "rotate_right_complex",
     "rotate_rows",
+    "rotate_rows_complex",
 ]
 
 
@@ -175,12 +177,29 @@ def rotate_rows(A, k, j0, j1, c, s):
     """Rows k and k+1 of A, columns [j0, j1), become G times themselves."""
     up = A[k, j0:j1]
     low = A[k + 1, j0:j1]
-    sc = np.conj(s)
     for j in range(up.size):
         a = up[j]
         b = low[j]
         up[j] = c * a + s * b
-        low[j] = c * b - sc * a
+        low[j] = c * b - s * a
+
+
+@inlined
+def rotate_rows_complex(R, I, k, j0, j1, c, sr, si):
+    """The same for a complex matrix R + iI and s = sr + i·si."""
+    ur = R[k, j0:j1]
+    ui = I[k, j0:j1]
+    lr = R[k + 1, j0:j1]
+    li = I[k + 1, j0:j1]
+    for j in range(ur.size):
+        ar = ur[j]
+        ai = ui[j]
+        br = lr[j]
+        bi = li[j]
+        ur[j] = c * ar + sr * br - si * bi
+        ui[j] = c * ai + sr * bi + si * br
+        lr[j] = c * br - sr * ar - si * ai
+        li[j] = c * bi - sr * ai + si * ar
 
 
 @inlined
@@ -224,36 +243,35 @@ def _rotate_row_right(row, k0, k1, C, S):
     carry = row[k0]
     for k in range(k0, k1):
         x = row[k + 1]
-        row[k] = C[k] * carry + np.conj(S[k]) * x
+        row[k] = C[k] * carry + S[k] * x
         carry = C[k] * x - S[k] * carry
     row[k1] = carry
 
 
 @compiled
-def rotate_right(A, top, lo, hi, C, S):
-    """Rows [top, hi) of A times the adjoints of rotations lo … hi−2, where row i of the window starts at rotation i−1."""
+def rotate_right(A, lo, hi, C, S):
+    """Rows [0, hi) of A times the adjoints of rotations lo … hi−2, where row i of the window starts at rotation i−1."""
     last = hi - 1
-    i = top
+    i = 0
     while i < hi:
         if i + 4 <= hi:
             # the first rotation that all four rows share
-            k0 = max(lo, i + 2)
+            k0 = min(max(lo, i + 2), last)
             for r in range(4):
                 start = max(lo, i + r - 1)
                 if start < k0:
-                    _rotate_row_right(A[i + r], start, min(k0, last), C, S)
+                    _rotate_row_right(A[i + r], start, k0, C, S)
             if k0 < last:
                 ra, rb, rc, rd = A[i], A[i + 1], A[i + 2], A[i + 3]
                 a, b, c, d = ra[k0], rb[k0], rc[k0], rd[k0]
                 for k in range(k0, last):
                     ck = C[k]
                     sk = S[k]
-                    sj = np.conj(sk)
                     xa, xb, xc, xd = ra[k + 1], rb[k + 1], rc[k + 1], rd[k + 1]
-                    ra[k] = ck * a + sj * xa
-                    rb[k] = ck * b + sj * xb
-                    rc[k] = ck * c + sj * xc
-                    rd[k] = ck * d + sj * xd
+                    ra[k] = ck * a + sk * xa
+                    rb[k] = ck * b + sk * xb
+                    rc[k] = ck * c + sk * xc
+                    rd[k] = ck * d + sk * xd
                     a = ck * xa - sk * a
                     b = ck * xb - sk * b
                     c = ck * xc - sk * c
@@ -267,6 +285,53 @@ def rotate_right(A, top, lo, hi, C, S):
             start = max(lo, i - 1)
             if start < last:
                 _rotate_row_right(A[i], start, last, C, S)
+            i += 1
+
+
+@inlined
+def _rotate_row_right_complex(rr, ri, k0, k1, C, Sr, Si):
+    """One row rr + i·ri times Gᴴ of rotations k0 … k1−1."""
+    ar, ai = rr[k0], ri[k0]
+    for k in range(k0, k1):
+        c, sr, si = C[k], Sr[k], Si[k]
+        xr, xi = rr[k + 1], ri[k + 1]
+        rr[k] = c * ar + sr * xr + si * xi
+        ri[k] = c * ai + sr * xi - si * xr
+        ar, ai = c * xr - sr * ar + si * ai, c * xi - sr * ai - si * ar
+    rr[k1] = ar
+    ri[k1] = ai
+
+
+@compiled
+def rotate_right_complex(R, I, lo, hi, C, Sr, Si):
+    """The same for a complex matrix R + iI and rotations with s = Sr + i·Si; two rows at a time."""
+    last = hi - 1
+    i = 0
+    while i < hi:
+        if i + 2 <= hi:
+            k0 = min(max(lo, i), last)
+            start = max(lo, i - 1)
+            if start < k0:
+                _rotate_row_right_complex(R[i], I[i], start, k0, C, Sr, Si)
+            if k0 < last:
+                pr, pi, qr, qi = R[i], I[i], R[i + 1], I[i + 1]
+                ar, ai, br, bi = pr[k0], pi[k0], qr[k0], qi[k0]
+                for k in range(k0, last):
+                    c, sr, si = C[k], Sr[k], Si[k]
+                    xr, xi, yr, yi = pr[k + 1], pi[k + 1], qr[k + 1], qi[k + 1]
+                    pr[k] = c * ar + sr * xr + si * xi
+                    pi[k] = c * ai + sr * xi - si * xr
+                    qr[k] = c * br + sr * yr + si * yi
+                    qi[k] = c * bi + sr * yi - si * yr
+                    ar, ai = c * xr - sr * ar + si * ai, c * xi - sr * ai - si * ar
+                    br, bi = c * yr - sr * br + si * bi, c * yi - sr * bi - si * br
+                pr[last], pi[last] = ar, ai
+                qr[last], qi[last] = br, bi
+            i += 2
+        else:
+            start = max(lo, i - 1)
+            if start < last:
+                _rotate_row_right_complex(R[i], I[i], start, last, C, Sr, Si)
             i += 1
 
 

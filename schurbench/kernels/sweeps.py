@@ -1,7 +1,8 @@
 """One sweep of each kind on an explicit half-open window [lo, hi) of H, with all of H and Zᴴ brought along.
 
 Preconditions of every kernel: H is square, row-major, upper Hessenberg; ``Qh`` (= Zᴴ) is row-major with as many columns,
-or has no rows when Z is not wanted; H[lo, lo−1] = 0 and H[hi, hi−1] = 0 where these entries exist.
+or has no rows when Z is not wanted; H[lo, lo−1] = 0 and H[hi, hi−1] = 0 where these entries exist. Complex matrices come
+as two planes (see `planes`).
 """
 
 from __future__ import annotations
@@ -14,10 +15,12 @@ from schurbench.kernels.rotations import (
     reflect_rows,
     reflect_rows_twice,
     rotate_right,
+    rotate_right_complex,
     rotate_rows,
+    rotate_rows_complex,
 )
 
-__all__ = ["double_shift_sweep", "single_shift_step"]
+__all__ = ["double_shift_sweep", "single_shift_step", "single_shift_step_complex"]
 
 
 @compiled
@@ -28,12 +31,12 @@ def single_shift_step(H, Qh, lo, hi, shift, C, S, salt):
 
     Parameters
     ----------
-    H, Qh : (n, n) arrays, changed in place
+    H, Qh : (n, n) float64 arrays, changed in place
     lo, hi : int
         Window, hi − lo ≥ 2.
-    shift : scalar of H's type
-    C : (n,) float64 array; S : (n,) array of H's type
-        Receive the rotations lo … hi−2: rows k, k+1 were multiplied by [C_k, S_k; −conj(S_k), C_k].
+    shift : float
+    C, S : (n,) float64 arrays
+        Receive the rotations lo … hi−2: rows k, k+1 were multiplied by [C_k, S_k; −S_k, C_k].
     salt : int
         Number of the sweep, by which the last bits of the rotations are rounded in turn (see `rotations`).
 
@@ -52,12 +55,56 @@ def single_shift_step(H, Qh, lo, hi, shift, C, S, salt):
         H[k, k] = r
         H[k + 1, k] = 0.0
         rotate_rows(H, k, k + 1, n, c, s)
-    rotate_right(H, 0, lo, hi, C, S)
+    rotate_right(H, lo, hi, C, S)
     for i in range(lo, hi):
         H[i, i] += shift
     if Qh.shape[0] > 0:
         for k in range(lo, hi - 1):
             rotate_rows(Qh, k, 0, n, C[k], S[k])
+    return hi - lo - 1
+
+
+@compiled
+def single_shift_step_complex(H, Qh, lo, hi, shift, C, S, salt):
+    """The same step for a complex matrix in planes.
+
+    Parameters
+    ----------
+    H, Qh : (2, n, n) float64 arrays, changed in place
+    lo, hi : int
+        Window, hi − lo ≥ 2.
+    shift : complex
+    C : (n,) float64 array; S : (2, n) float64 array
+        Receive the rotations lo … hi−2: rows k, k+1 were multiplied by [c, s; −conj(s), c] with s = S[0, k] + i S[1, k].
+    salt : int
+        As above.
+
+    Returns
+    -------
+    int
+        Number of rotations, hi − lo − 1.
+    """
+    Hr, Hi = H[0], H[1]
+    n = Hr.shape[0]
+    for i in range(lo, hi):
+        Hr[i, i] -= shift.real
+        Hi[i, i] -= shift.imag
+    for k in range(lo, hi - 1):
+        f = complex(Hr[k, k], Hi[k, k])
+        g = complex(Hr[k + 1, k], Hi[k + 1, k])
+        c, s, r = make_rotation(f, g, salt, k)
+        C[k] = c
+        S[0, k], S[1, k] = s.real, s.imag
+        Hr[k, k], Hi[k, k] = r.real, r.imag
+        Hr[k + 1, k] = Hi[k + 1, k] = 0.0
+        rotate_rows_complex(Hr, Hi, k, k + 1, n, c, s.real, s.imag)
+    rotate_right_complex(Hr, Hi, lo, hi, C, S[0], S[1])
+    for i in range(lo, hi):
+        Hr[i, i] += shift.real
+        Hi[i, i] += shift.imag
+    if Qh.shape[1] > 0:
+        for k in range(lo, hi - 1):
+            rotate_rows_complex(Qh[0], Qh[1], k, 0, n, C[k], S[0, k], S[1, k])
     return hi - lo - 1
 
 

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from typing import Any
-
 import numpy as np
 
 __all__ = ["Workspace"]
@@ -14,7 +12,8 @@ class Workspace:
 
     Attributes
     ----------
-    C : (n,) float64; S : (n,) of H's type
+    C : (n,) float64
+    S : (n,) float64, or (2, n) for a complex H
         Rotations of the last explicit single-shift step.
     V : (n, 3) float64
         Reflectors (t, v₁, v₂) of the last double-shift sweep; no rows for a complex H.
@@ -22,7 +21,8 @@ class Workspace:
 
     __slots__ = ("C", "S", "V")
 
-    def __init__(self, n: int, dtype: Any) -> None:
+    def __init__(self, H: np.ndarray) -> None:
+        n = H.shape[-1]
         self.C = np.ones(n)
-        self.S = np.zeros(n, dtype=dtype)
-        self.V = np.zeros((n if dtype == np.float64 else 0, 3))
+        self.S = np.zeros(n if H.ndim == 2 else (2, n))
+        self.V = np.zeros((n if H.ndim == 2 else 0, 3))

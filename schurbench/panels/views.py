@@ -166,7 +166,7 @@ def ticks(lo: float, hi: float, most: int = 6) -> list[int]:
     span = max(hi - lo, 1.0)
     for unit in (m * 10**e for e in range(9) for m in (1, 2, 5)):
         first = int(np.ceil(lo / unit)) * unit
-        if (hi - first) / unit + 1 <= most or unit >= span:
+        if (hi - first) // unit + 1 <= most or unit >= span:
             return list(range(first, int(np.floor(hi)) + 1, unit))
     return [round(lo)]
 
@@ -193,9 +193,17 @@ def healthy_wait(run: Run) -> int:
 
 
 def waited_row(run: Run, cursor: int) -> int:
-    """The row whose subdiagonal entry the next deflation waits for: the last of the active window, 0 when done."""
+    """The row whose subdiagonal entry the next deflation waits for; 0 when done.
+
+    It is the last of the active window. Two shifts drive out two eigenvalues together, so with them it is whichever of
+    the last two rows has the smaller entry.
+    """
     lo, hi = run.window(cursor)
-    return hi - 1 if hi - lo >= 2 else max(0, hi - 1)
+    ahead = run.steps[min(cursor, len(run.steps) - 1)] if len(run.steps) else None
+    if ahead is not None and len(ahead.shifts) == 2 and hi - lo >= 3:
+        last_two = run.subdiagonal(cursor)[hi - 3 : hi - 1]
+        return hi - 2 + int(last_two[1] <= last_two[0])
+    return max(0, hi - 1)
 
 
 def longest_wait(run: Run) -> int:
@@ -277,20 +285,24 @@ def curves_view(run: Run, chosen: tuple[int, ...]) -> CurvesView:
 
 
 def deflation_threshold(run: Run, cursor: int, row: int) -> float:
-    """Largest |h[row, row−1]| that the run's deflation test would accept after step ``cursor``.
+    """Largest |h[row, row−1]| that the run's deflation test would accept after step ``cursor``."""
+    from schurbench.kernels import deflation_threshold as threshold
 
-    The test looks at the neighbouring entries only, so a matrix of at most four rows around the entry is enough.
-    """
-    from schurbench.kernels.blocks import deflation_threshold as threshold
-
-    lo, hi = max(0, row - 2), min(run.n, row + 2)
-    near = np.diag(run.diagonal(cursor)[lo:hi])
-    inner = np.arange(hi - lo - 1)
-    near[inner + 1, inner] = run.subdiagonal(cursor)[lo : hi - 1]
-    near[inner, inner + 1] = run.superdiagonal(cursor)[lo : hi - 1]
+    diagonal, below, above = run.diagonal(cursor), run.subdiagonal(cursor), run.superdiagonal(cursor)
     tol = run.settings.tol
-    test = deflation_test(run.settings.deflation)
-    return float(threshold(near, row - lo, test.code, -1.0 if tol is None else tol, run.norm))
+    return float(
+        threshold(
+            diagonal[row - 1],
+            diagonal[row],
+            below[row - 1],
+            abs(above[row - 1]),
+            below[row - 2] if row >= 2 else 0.0,
+            below[row] if row + 1 < run.n else 0.0,
+            deflation_test(run.settings.deflation).code,
+            -1.0 if tol is None else tol,
+            run.norm,
+        )
+    )
 
 
 def _finite(values: Floats) -> Floats:

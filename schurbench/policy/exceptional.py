@@ -31,13 +31,13 @@ def exceptional_shifts(view: WindowView, turn: int, count: int, real: bool) -> t
     real : bool
         Whether a single shift must be real.
     """
-    H, (lo, hi) = view.H, view.window
+    entry, (lo, hi) = view.entry, view.window
     if turn % 2 == 0:
-        corner = complex(H[hi - 1, hi - 1])
-        size = abs(H[hi - 1, hi - 2]) + (abs(H[hi - 2, hi - 3]) if hi - lo > 2 else 0.0)
+        corner = complex(entry(hi - 1, hi - 1))
+        size = abs(entry(hi - 1, hi - 2)) + (abs(entry(hi - 2, hi - 3)) if hi - lo > 2 else 0.0)
     else:
-        corner = complex(H[lo, lo])
-        size = abs(H[lo + 1, lo]) + (abs(H[lo + 2, lo + 1]) if hi - lo > 2 else 0.0)
+        corner = complex(entry(lo, lo))
+        size = abs(entry(lo + 1, lo)) + (abs(entry(lo + 2, lo + 1)) if hi - lo > 2 else 0.0)
     centre = corner + _DIAGONAL * float(size)
     if count == 1:
         return (complex(centre.real),) if real else (centre,)

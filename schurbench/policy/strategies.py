@@ -12,8 +12,6 @@ import cmath
 from collections.abc import Sequence
 from typing import Any, Protocol, runtime_checkable
 
-import numpy as np
-
 from schurbench.errors import SettingsError
 from schurbench.measures import Array
 
@@ -35,29 +33,42 @@ class WindowView:
 
     Attributes
     ----------
-    H : (n, n) ndarray
-        Write-protected view of the whole Hessenberg matrix, in working units. Valid only during the call.
     window : (int, int)
         Half-open active window; at least two rows.
     waited : int
         Sweeps since the last deflation.
     sweep : int
         Sweeps done so far in the whole run.
+    real : bool
+        Whether H is real.
     """
 
-    __slots__ = ("H", "sweep", "waited", "window")
+    __slots__ = ("_planes", "real", "sweep", "waited", "window")
 
-    def __init__(self, H: Array) -> None:
-        self.H = H.view()
-        self.H.setflags(write=False)
-        self.window = (0, H.shape[0])
+    def __init__(self, planes: Array) -> None:
+        self._planes = planes.view()
+        self._planes.setflags(write=False)
+        self.real = planes.ndim == 2
+        self.window = (0, planes.shape[-1])
         self.waited = 0
         self.sweep = 0
 
+    @property
+    def H(self) -> Array:
+        """The whole Hessenberg matrix, in working units, (n, n), write-protected; for one entry `entry` is quicker."""
+        H: Array = self._planes if self.real else self._planes[0] + 1j * self._planes[1]
+        H.setflags(write=False)
+        return H
+
+    def entry(self, i: int, j: int) -> Any:
+        """h[i, j] as a Python float or complex."""
+        item = self._planes.item
+        return item(i, j) if self.real else complex(item(0, i, j), item(1, i, j))
+
     def trailing(self) -> tuple[Any, Any, Any, Any]:
         """Entries a, b, c, d of the trailing 2×2 block [a b; c d] of the window, as Python numbers."""
-        item, i = self.H.item, self.window[1] - 2
-        return item(i, i), item(i, i + 1), item(i + 1, i), item(i + 1, i + 1)
+        entry, i = self.entry, self.window[1] - 2
+        return entry(i, i), entry(i, i + 1), entry(i + 1, i), entry(i + 1, i + 1)
 
 
 @runtime_checkable
@@ -104,7 +115,7 @@ class Rayleigh:
     def shifts(self, view: WindowView) -> tuple[complex, ...]:
         """Return the Rayleigh quotient of the last basis vector."""
         last = view.window[1] - 1
-        return (view.H.item(last, last),)
+        return (view.entry(last, last),)
 
 
 class Wilkinson:
@@ -142,7 +153,7 @@ class Francis:
         """Return both eigenvalues of the trailing 2×2 block."""
         a, b, c, d = view.trailing()
         near = _nearer_eigenvalue(a, b, c, d)
-        if isinstance(d, float):
+        if view.real:
             if near.imag != 0.0:
                 return (near, near.conjugate())
             near = near.real
@@ -213,7 +224,7 @@ class Given:
 
     def shifts(self, view: WindowView) -> tuple[complex, ...]:
         """Return the next shift of the list; in real form the next real shift or conjugate pair."""
-        if view.H.dtype == np.float64:
+        if view.real:
             return self._real_sweeps[view.sweep % len(self._real_sweeps)]
         return (self.values[view.sweep % len(self.values)],)
 

@@ -74,11 +74,11 @@ def _crosses(points: Floats, half_x: float, half_y: float) -> tuple[Floats, Floa
     return (xs, ys) if len(points) else (_NOTHING, _NOTHING)
 
 
-def _dashes(points: Floats, half_x: float) -> tuple[Floats, Floats]:
-    """One path of short strokes; with a stroke width of about their length they are squares."""
+def _dots(points: Floats) -> tuple[Floats, Floats]:
+    """One path of strokes without length; the square caps of the style sheet make them squares of the stroke width."""
     x, y = points[:, 0], points[:, 1]
     gap = np.full(len(points), np.nan)
-    xs = np.stack([x - half_x, x + half_x, gap], axis=1).ravel()
+    xs = np.stack([x, x, gap], axis=1).ravel()
     ys = np.stack([y, y, gap], axis=1).ravel()
     return (xs, ys) if len(points) else (_NOTHING, _NOTHING)
 
@@ -222,12 +222,14 @@ class MatrixFigure(_Figure):
         x, y = bqplot.LinearScale(min=0, max=1), bqplot.LinearScale(min=0, max=1, reverse=True)
         scales = {"x": x, "y": y}
         self._swap = _Swap(x, y)
+        # dashes over a dark line, to be seen on every colour of the scale
+        self._ground = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=["#222222"], stroke_width=3.5)
         self._window = bqplot.Lines(
             x=_NOTHING, y=_NOTHING, scales=scales, colors=[ACTIVE], stroke_width=2.5, line_style="dashed"
         )
         self._row = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CHOSEN], stroke_width=1.5)
         self._axes = [_axis(x, "column"), _axis(y, "row", "left")]
-        super().__init__([self._swap.mark, self._window, self._row], x, y, self._axes, height, _MARGIN)
+        super().__init__([self._swap.mark, self._ground, self._window, self._row], x, y, self._axes, height, _MARGIN)
         self._n = 0
 
     def show(self, view: MatrixView, limits: tuple[float, float], n: int) -> None:
@@ -239,10 +241,9 @@ class MatrixFigure(_Figure):
                 axis.tick_values = [float(t) for t in ticks(0, n - 1, 5)]
         self._swap.show(picture_png(view.level[::-1], limits, 256), extent, extent)
         lo, hi = view.window[0] - 0.5, view.window[1] - 0.5
-        if hi > lo:
-            _draw(self._window, (np.array([lo, hi, hi, lo, lo]), np.array([lo, lo, hi, hi, lo])))
-        else:
-            _draw(self._window, (_NOTHING, _NOTHING))
+        square = (np.array([lo, hi, hi, lo, lo]), np.array([lo, lo, hi, hi, lo])) if hi > lo else (_NOTHING, _NOTHING)
+        _draw(self._ground, square)
+        _draw(self._window, square)
 
     def choose(self, row: int) -> None:
         _draw(self._row, (np.array([-0.5, self._n - 0.5]), np.array([row, row], dtype=np.float64)))
@@ -344,6 +345,7 @@ class DeflationFigure(_Figure):
         self._axes = [_axis(x, "step"), _axis(y, "row", "left")]
         marks = [self._outline, self._split, self._pair, self._single, self._cursor, self._row]
         super().__init__(marks, x, y, self._axes, height, _MARGIN)
+        self.widget.add_class("sb-dots")
 
     def show(self, view: DeflationView, n: int, steps: int) -> None:
         across, down = (-0.5, steps + 0.5), (-0.5, n - 0.5)
@@ -359,7 +361,7 @@ class DeflationFigure(_Figure):
         else:
             _draw(self._outline, (_NOTHING, _NOTHING))
         wide, tall = 0.006 * (steps + 1), 0.03 * n
-        _draw(self._single, _dashes(view.single, 0.8 * wide))
+        _draw(self._single, _dots(view.single))
         _draw(self._pair, _squares(view.pair, wide, tall))
         _draw(self._split, _crosses(view.split, wide, tall))
 
@@ -385,9 +387,7 @@ class SpectrumFigure(_Figure):
     def __init__(self, height: str) -> None:
         x, y = bqplot.LinearScale(min=-1, max=1), bqplot.LinearScale(min=-1, max=1)
         scales = {"x": x, "y": y}
-        self._boundary = bqplot.Lines(
-            x=_NOTHING, y=_NOTHING, scales=scales, colors=[MUTED], stroke_width=1, line_style="dotted"
-        )
+        self._boundary = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[MUTED], stroke_width=1)
         self._active = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[ACTIVE], stroke_width=1.5)
         self._converged = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CONVERGED], stroke_width=5)
         self._shifts = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[SHIFT], stroke_width=2)
@@ -395,6 +395,7 @@ class SpectrumFigure(_Figure):
         self._axes = [_axis(x, "real part"), _axis(y, "imaginary part", "left")]
         marks = [self._boundary, self._converged, self._active, self._shifts, self._chosen]
         super().__init__(marks, x, y, self._axes, height, _MARGIN)
+        self.widget.add_class("sb-dots")
 
     def frame(self, x: tuple[float, float], y: tuple[float, float]) -> None:
         """Set the ranges for a run; they stay while the cursor moves."""
@@ -407,7 +408,7 @@ class SpectrumFigure(_Figure):
     def show(self, view: SpectrumView) -> None:
         dx, dy = 0.012 * (self.x.max - self.x.min), 0.022 * (self.y.max - self.y.min)
         _draw(self._active, _crosses(view.active, dx, dy))
-        _draw(self._converged, _dashes(view.converged, 0.7 * dx))
+        _draw(self._converged, _dots(view.converged))
         _draw(self._shifts, _diamonds(view.shifts, 1.6 * dx, 1.6 * dy))
         _draw(self._chosen, _squares(view.chosen, 2.0 * dx, 2.0 * dy))
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 __all__ = ["FIGURE_HEIGHT", "SIDE_WIDTH", "STYLE", "TRACK_HEIGHT"]
 
 #: Panels grow with the window: at 800 px two rows of them, the track and the sentences fit without scrolling.
-FIGURE_HEIGHT = "clamp(165px, 23vh, 420px)"
+FIGURE_HEIGHT = "clamp(165px, calc(34vh - 88px), 480px)"
 TRACK_HEIGHT = "clamp(58px, 8.5vh, 120px)"
 SIDE_WIDTH = "304px"
 
@@ -14,7 +14,11 @@ STYLE = """<style>
 .sb-bench { --bq-axis-tick-text-font: 10px sans-serif; --bq-axislabel-font: 11px sans-serif; }
 .sb-bench .widget-html, .sb-bench .jupyter-widgets { margin: 0; }
 .sb-bench .widget-html-content { padding: 0; }
-.sb-bench .bqplot > svg .axis text.axislabel { text-anchor: end; }
+.sb-bench .bqplot > svg .axis text.axislabel, .sb-bench .bqplot > svg .axis .tick text { fill: var(--jp-ui-font-color1); }
+.sb-dots svg path { stroke-linecap: square; }
+.sb-bench { overflow: hidden; }
+.sb-head, .sb-head .widget-html-content { min-width: 0; max-width: 100%; overflow: hidden; }
+.sb-head details[open] summary { white-space: normal; }
 .sb-head details { max-height: 40vh; overflow-y: auto; }
 .sb-head summary { cursor: pointer; overflow: hidden; text-overflow: ellipsis; white-space: nowrap; }
 .sb-head td { padding: 0 14px 0 0; vertical-align: top; }

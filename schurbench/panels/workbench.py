@@ -295,7 +295,8 @@ class Workbench(w.VBox):
 
     def close(self) -> None:
         """Stop the work and close every widget of the page."""
-        self.cancel()
+        if hasattr(self, "_cancel"):  # one whose arguments were refused is closed too, by the garbage collector
+            self.cancel()
         super().close()
 
     # --- building -------------------------------------------------------------------------------------------------
@@ -614,8 +615,14 @@ class Workbench(w.VBox):
     def _try_remedy(self, finding: Any) -> None:
         def apply() -> None:
             self._refuse_while_working()
-            for name, value in finding.remedy.settings.items():
-                setattr(self, name, value)
+            remedy = finding.remedy
+            if not remedy.settings:
+                self._begin("Solving", lambda: self._solve(remedy))
+                return
+            # a remedy names every setting that differs from the defaults
+            for name in _SETTINGS:
+                value = remedy.settings.get(name, self.trait_defaults(name))
+                setattr(self, name, tuple(value) if name == "shifts" else value)
             self.start()
 
         self._guarded(apply, self._form.error)

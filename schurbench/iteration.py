@@ -152,7 +152,7 @@ class Iteration:
         """Copy of the current H, in working units."""
         from schurbench.kernels import join
 
-        return join(self._H)
+        return np.asarray(join(self._H))
 
     @property
     def Z(self) -> Array | None:

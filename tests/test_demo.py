@@ -133,7 +133,7 @@ def test_a_reach_responds_as_the_saint_venant_equations_do() -> None:
 
 @pytest.mark.parametrize("gates", ["free", "submerged"])
 def test_a_lasting_change_of_supply_passes_through_every_reach(gates: str) -> None:
-    """Water is conserved and control integrates: every flow comes to equal the supply, every controlled level comes back."""
+    """Water is conserved and control integrates: every flow comes to equal the supply, and every level comes back."""
     m = sb.demo_matrix(83, gates=gates)
     assert m.labels is not None
     push = np.zeros(83)
@@ -169,7 +169,7 @@ def test_reaches_are_identical_and_causes_travel_downstream(n: int) -> None:
 
 
 def test_the_spectrum_is_that_of_one_reach_in_exact_arithmetic() -> None:
-    """Characteristic and minimal polynomial with python-flint: every eigenvalue repeats, in a chain as long as the canal."""
+    """Characteristic and minimal polynomial with python-flint: every eigenvalue is a chain as long as the canal."""
     flint = pytest.importorskip("flint")
 
     def rational(a: np.ndarray) -> object:

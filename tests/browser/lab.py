@@ -55,6 +55,7 @@ def lab_server(notebook: Path, scratch: Path) -> Iterator[str]:
     )
     environment = lab_environment(scratch / "settings") | {
         "JUPYTER_CONFIG_DIR": str(scratch / "config"),
+        "JUPYTER_DATA_DIR": str(scratch / "data"),
         "JUPYTER_RUNTIME_DIR": str(scratch / "runtime"),
         "PYTHONUNBUFFERED": "1",
     }

@@ -148,6 +148,15 @@ def test_names_from_the_data_cannot_become_markup() -> None:
     wb.close()
 
 
+def test_a_matrix_too_large_to_run_unasked_waits_for_its_settings() -> None:
+    wb = sb.Workbench(np.triu(np.ones((401, 401))))
+    assert wb.run is None
+    assert wb.status == "ready"
+    assert "press Run" in wb._work.status.value
+    assert "n = 401" in wb._head.value
+    wb.close()
+
+
 # --- working ------------------------------------------------------------------------------------------------------
 
 

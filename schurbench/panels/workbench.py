@@ -874,11 +874,15 @@ def _safe_stem(name: str) -> str:
 def _head(matrix: WorkingMatrix, profile: Any) -> str:
     kind = "real" if matrix.is_real else "complex"
     remarks = profile.remarks or ("Nothing stands out.",)
+    if profile.departure is None:
+        departure = f"between {number(profile.departure_lower)} and {number(profile.departure_upper)}"
+    else:
+        departure = number(profile.departure)
     line = f"n = {matrix.n}, {kind}, ‖A‖<sub>F</sub> = {number(profile.norm_frobenius)}. {escape(remarks[0])}"
     facts = [
         ("source", matrix.source),
         ("structure", ", ".join(profile.structures) or "none to rounding"),
-        ("departure from normality", f"{number(profile.departure)} of the norm ({profile.departure_source})"),
+        ("departure from normality", f"{departure} of the norm"),
         ("balancing", f"shrinks the 1-norm by a factor of {number(profile.balance_factor)}"),
         ("blocks after permuting", plural(profile.components, "block")),
         ("expected for a run", f"{duration(profile.seconds_estimate)}, {number(profile.memory_estimate / 2**20)} MiB"),

@@ -62,7 +62,7 @@ def read_npz(path: Path, key: str | None, what: str) -> Found:
     """
     try:
         archive = zipfile.ZipFile(path)
-    except (zipfile.BadZipFile, OSError) as error:
+    except Exception as error:
         raise InputError(
             f"{what} is not a readable .npz archive ({one_line(error)}); it may be truncated, write it again"
         ) from error
@@ -74,10 +74,10 @@ def read_npz(path: Path, key: str | None, what: str) -> Found:
             raise InputError(f"{what} holds no arrays; write it with numpy.savez or name another file")
         if members.keys() >= _SPARSE_MEMBERS:
             return _read_sparse(path, archive, members, key, what)
-        headers = {name: _member_header(archive, info, f"{name} in {what}") for name, info in members.items()}
+        headers = {name: _member_header(archive, info, f"{one_line(name)} in {what}") for name, info in members.items()}
         candidates = [Candidate(name, header.shape, _refusal(header)) for name, header in headers.items()]
         chosen, notes = choose(candidates, key, what)
-        values = _member_array(archive, members[chosen], headers[chosen], f"{chosen} in {what}")
+        values = _member_array(archive, members[chosen], headers[chosen], f"{one_line(chosen)} in {what}")
         return Found(values, key=chosen, notes=notes)
 
 
@@ -170,10 +170,10 @@ def _read_sparse(
         raise InputError(f"{what} holds one sparse matrix and no named arrays; leave the key out")
     expanded = 0
     for name, info in members.items():
-        header = _member_header(archive, info, f"{name} in {what}")
+        header = _member_header(archive, info, f"{one_line(name)} in {what}")
         if header.dtype.hasobject or info.file_size != header.expected_bytes:
             raise InputError(
-                f"{what} has a damaged or pickled member {name}; write it again with scipy.sparse.save_npz"
+                f"{what} has a damaged or pickled member {one_line(name)}; write it again with scipy.sparse.save_npz"
             )
         expanded += info.file_size
     require_memory(expanded, what=what)

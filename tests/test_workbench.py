@@ -235,6 +235,18 @@ def test_a_structured_solver_is_a_remedy_too() -> None:
     wb.close()
 
 
+def test_a_cluster_comes_to_the_top_of_the_factors(shared: sb.Workbench) -> None:
+    finding = next(f for f in shared.diagnosis.findings if f.cause == "clustered")
+    kept = shared.factors
+    shared._try_remedy(finding)
+    shared.wait(PATIENCE)
+    top = shared.factors.eigenvalues[:2]
+    folded = top.real + 1j * np.abs(top.imag)
+    assert (np.abs(folded - finding.remedy.centre) <= finding.remedy.radius).all()
+    assert shared.factors.certificate().passed
+    shared.factors = kept
+
+
 @pytest.mark.parametrize("suffix", [".mat", ".npz"])
 def test_export_writes_factors_of_the_loaded_matrix(shared: sb.Workbench, tmp_path: Path, suffix: str) -> None:
     written = shared.export(tmp_path / f"plant{suffix}")

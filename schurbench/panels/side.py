@@ -185,9 +185,8 @@ class FindingList:
             items.append(w.HTML(_finding_html(finding)))
             remedy = finding.remedy
             if remedy is not None:
-                changed = {name: remedy.settings.get(name) for name in getattr(remedy, "changes", ())}
                 button = w.Button(
-                    description="Try " + (_settings_text(changed) or "the structured solver"),
+                    description="Try " + _remedy_text(remedy),
                     tooltip=remedy.text,
                     layout=w.Layout(width="auto", max_width="100%"),
                 )
@@ -208,6 +207,14 @@ class FindingList:
 
 def _sentence(value: Any) -> str:
     return str(getattr(value, "statement", value))
+
+
+def _remedy_text(remedy: Any) -> str:
+    from schurbench.diagnosis import SettingsRemedy, SolverRemedy
+
+    if isinstance(remedy, SettingsRemedy):
+        return _settings_text({name: remedy.settings[name] for name in remedy.changes})
+    return "the structured solver" if isinstance(remedy, SolverRemedy) else "bringing the cluster to the top"
 
 
 def _settings_text(settings: dict[str, Any]) -> str:

@@ -25,7 +25,7 @@ STYLE = """<style>
 .sb-bench .sb-title { white-space: nowrap; overflow: hidden; height: 18px; line-height: 18px !important; }
 .sb-title b { margin-right: 8px; }
 .sb-title span { margin-right: 8px; white-space: nowrap; color: var(--jp-ui-font-color1); }
-.sb-bench .sb-say { height: 33px; min-height: 33px; overflow: hidden; color: var(--jp-ui-font-color1); }
+.sb-bench .sb-say { height: 48px; min-height: 48px; overflow: hidden; color: var(--jp-ui-font-color1); }
 .sb-trackline { height: 26px; align-items: center; }
 .sb-trackline button, .sb-tabs button { flex: 0 0 auto; min-width: max-content; }
 .sb-trackline .sb-where { flex: 1 1 auto; overflow: hidden; white-space: nowrap; text-overflow: ellipsis; }

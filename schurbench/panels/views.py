@@ -252,7 +252,7 @@ def matrix_view(run: Run, cursor: int, state: State | None = None) -> MatrixView
         where = f"Active: {rows((lo, hi))} of {n}; finished {done}" + (f", waiting {waiting}." if waiting > 0 else ".")
     else:
         where = f"All {n} rows are finished."
-    amounts = f"Zero: {number(share * zeros)} %; under rounding level: {number(share * faint)} %."
+    amounts = f"Zero: {number(share * zeros)}\u00a0%; under rounding level: {number(share * faint)}\u00a0%."
     return MatrixView(level, (lo, hi), f"{where} {amounts}")
 
 

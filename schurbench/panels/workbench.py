@@ -586,20 +586,31 @@ class Workbench(w.VBox):
         else:
             self.status = "ready"
 
-    def _solve(self, remedy: Any) -> None:
-        solution = remedy.run()
+    def _carry_out_remedy(self, remedy: Any) -> None:
+        """A remedy that is no iteration: other factors of the same run, or a structured solver."""
+        from schurbench.factors import Factors
+
+        result = remedy.run()
         if self.run is not None:
             self._say_outcome(self.run)
-        self._work.status.value = (
-            f"Structured solver: {duration(solution.seconds)}, backward error {number(solution.backward_error)} "
-            "in units of n times rounding. The panels still show the iteration."
-        )
+        if isinstance(result, Factors):
+            self.factors = result
+            self._save.verdict.value = _verdict(result)
+            self._tabs.selected_index = 2
+            self._work.status.value = f"Reordered: {escape(result.selection)} first. Factors shows them."
+        else:
+            self._work.status.value = (
+                f"Structured solver: {duration(result.seconds)}, backward error {number(result.backward_error)} "
+                "in units of n times rounding. The panels still show the iteration."
+            )
 
     def _ticked(self) -> list[Any]:
         chosen: list[Any] = list(self._compare_form.chosen())
         if self._compare_form.current.value:
             changed = {name: value for name, value in self.settings().items() if value != self.trait_defaults(name)}
-            chosen.insert(0, {"strategy": self.strategy, **changed})
+            own = {"strategy": self.strategy, **changed}
+            if len(own) > 1 or self.strategy not in chosen:
+                chosen.insert(0, own)
         return chosen
 
     # --- what the controls do -------------------------------------------------------------------------------------
@@ -617,7 +628,7 @@ class Workbench(w.VBox):
             self._refuse_while_working()
             remedy = finding.remedy
             if not remedy.settings:
-                self._begin("Solving", lambda: self._solve(remedy))
+                self._begin("Trying", lambda: self._carry_out_remedy(remedy))
                 return
             # a remedy names every setting that differs from the defaults
             for name in _SETTINGS:

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import json
+import os
+import signal
 import subprocess
 import sys
 import threading
@@ -449,6 +451,31 @@ def test_open_refuses_what_it_cannot_show(tmp_path: Path, monkeypatch: pytest.Mo
         serve.open_workbench()
     with pytest.raises(sb.SchurbenchError, match="voila"):
         serve.open_workbench(page=True)
+
+
+@pytest.mark.slow
+def test_open_serves_the_notebook_on_the_file_until_it_is_interrupted(tmp_path: Path) -> None:
+    np.save(tmp_path / "mine.npy", np.diag([1.0, 2.0]))
+    (tmp_path / "work").mkdir()
+    code = "import sys; from schurbench.panels.serve import open_workbench; sys.exit(open_workbench('../mine.npy', browser=False))"
+    with (tmp_path / "log").open("w", encoding="utf-8") as log:
+        server = subprocess.Popen(
+            [sys.executable, "-c", code], cwd=tmp_path / "work", stdout=log, stderr=log, start_new_session=True
+        )
+        try:
+            until = time.monotonic() + 60.0
+            while "/lab/tree/mine_workbench.ipynb?token=" not in (
+                said := (tmp_path / "log").read_text(encoding="utf-8")
+            ):
+                assert server.poll() is None, said
+                assert time.monotonic() < until, said
+                time.sleep(0.2)
+            notebook = json.loads((tmp_path / "work" / "mine_workbench.ipynb").read_text(encoding="utf-8"))
+            assert str(tmp_path / "mine.npy") in "".join(notebook["cells"][1]["source"])
+            assert "http://127.0.0.1:" in said
+        finally:
+            os.killpg(server.pid, signal.SIGINT)  # what Ctrl+C in a terminal does
+            assert server.wait(30) == 0
 
 
 def test_binder_builds_what_the_project_declares() -> None:

@@ -105,6 +105,8 @@ def lab_command(notebook: Path, *, browser: bool = True, extra: tuple[str, ...] 
         "--LabApp.check_for_updates_class=jupyterlab.NeverCheckForUpdate",
         "--LabApp.extension_manager=readonly",
         "--ServerApp.answer_yes=True",
+        # in a container the user often is root; the server still listens to this machine only, with a token
+        *(("--allow-root",) if getattr(os, "geteuid", lambda: 1)() == 0 else ()),
         *(() if browser else ("--no-browser",)),
         *extra,
     ]
@@ -118,7 +120,7 @@ def page_command(notebook: Path, *, browser: bool = True) -> list[str]:
         "voila",
         str(notebook),
         "--Voila.ip=127.0.0.1",
-        "--auto-token",
+        "--Voila.auto_token=True",
         f"--Voila.tornado_settings={{'websocket_max_message_size': {MESSAGE_LIMIT}}}",
         *(() if browser else ("--no-browser",)),
     ]
@@ -166,7 +168,7 @@ def open_workbench(
     wanted = {"voila" if page else "jupyterlab": None, "ipywidgets": None, "bqplot": None}
     missing = [name for name in wanted if find_spec(name) is None]
     if missing:
-        extra = " voila" if "voila" in missing else ""
+        extra = " 'voila>=0.5'" if "voila" in missing else ""
         raise SchurbenchError(
             f"{' and '.join(missing)} not found; to open the workbench, run: pip install 'schurbench[workbench]'{extra}"
         )
@@ -175,6 +177,9 @@ def open_workbench(
         stem = f"{_plain_stem(load(file, key).name)}_workbench"
         file = Path(file).resolve()
     notebook = workbench_notebook(file, key)
+    if page:
+        del notebook["cells"][0]  # how to run a cell: a page has none to run
+        stem += "_page"
     with tempfile.TemporaryDirectory(prefix="schurbench-") as scratch:
         try:
             written = write_notebook(notebook, Path.cwd(), stem)

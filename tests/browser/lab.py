@@ -51,7 +51,6 @@ def lab_server(notebook: Path, scratch: Path) -> Iterator[str]:
         "--ServerApp.port_retries=0",
         f"--IdentityProvider.token={token}",
         "--LabApp.expose_app_in_browser=True",
-        "--allow-root",
     )
     environment = lab_environment(scratch / "settings") | {
         "JUPYTER_CONFIG_DIR": str(scratch / "config"),

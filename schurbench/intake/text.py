@@ -212,7 +212,8 @@ def _numbers(row: list[str], line: int, what: str) -> npt.NDArray[np.float64] | 
     except ValueError:
         values = [_number(field, column, line, what) for column, field in enumerate(row)]
     for field, value in zip(row, values, strict=True):
-        if abs(value) >= EXACT_INTEGER and abs(value) < float("inf") and field.lstrip("+-").isdigit():
+        # Digits first: the modulus of a complex number may overflow, and Python then raises.
+        if field.lstrip("+-").isdigit() and EXACT_INTEGER <= abs(value) < float("inf"):
             _check_integer(field, line, what)
     return np.array(values)
 

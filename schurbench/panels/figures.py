@@ -60,6 +60,7 @@ def _axis(scale: Any, label: str, side: str = "bottom", **options: Any) -> Any:
         side=side,
         orientation="vertical" if vertical else "horizontal",
         grid_lines="none",
+        visible=False,  # until there is a range to show
         label_offset="38px" if vertical else "28px",
         **options,
     )
@@ -117,6 +118,8 @@ class _Figure:
         self._surface.on_element_click(clicked)
 
     def _range(self, x: tuple[float, float], y: tuple[float, float]) -> None:
+        for axis in self.widget.axes:
+            axis.visible = True
         for scale, (lo, hi) in ((self.x, x), (self.y, y)):
             with scale.hold_sync():
                 scale.min, scale.max = float(lo), float(hi)

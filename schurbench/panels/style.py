@@ -22,10 +22,10 @@ STYLE = """<style>
 .sb-head details { max-height: 40vh; overflow-y: auto; }
 .sb-head summary { cursor: pointer; overflow: hidden; text-overflow: ellipsis; white-space: nowrap; }
 .sb-head td { padding: 0 14px 0 0; vertical-align: top; }
-.sb-bench .sb-title { white-space: nowrap; overflow: hidden; height: 18px; line-height: 18px !important; }
+.sb-bench .sb-title.widget-html { white-space: nowrap; overflow: hidden; height: 18px; line-height: 18px !important; }
 .sb-title b { margin-right: 8px; }
 .sb-title span { margin-right: 8px; white-space: nowrap; color: var(--jp-ui-font-color1); }
-.sb-bench .sb-say { height: 48px; min-height: 48px; overflow: hidden; color: var(--jp-ui-font-color1); }
+.sb-bench .sb-say.widget-html { height: 48px; min-height: 48px; overflow: hidden; color: var(--jp-ui-font-color1); }
 .sb-trackline { height: 26px; align-items: center; }
 .sb-trackline button, .sb-tabs button { flex: 0 0 auto; min-width: max-content; }
 .sb-trackline .sb-where { flex: 1 1 auto; overflow: hidden; white-space: nowrap; text-overflow: ellipsis; }

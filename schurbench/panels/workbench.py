@@ -57,6 +57,13 @@ PAGE_INTERVAL = 0.05
 
 _SETTINGS = ("strategy", "form", "balance", "flip", "deflation", "tol", "exceptional", "limit", "shifts")
 
+_BEFORE_A_RUN = {
+    "matrix": "After a run: the magnitudes of H at the chosen step.",
+    "subdiagonal": "After a run: how each subdiagonal entry falls, over all steps.",
+    "deflations": "After a run: where and when eigenvalues left the window.",
+    "spectrum": "After a run: Ritz values and shifts at the chosen step.",
+}
+
 #: States of H kept for going back and forth.
 KEPT_STATES = 8
 
@@ -329,7 +336,7 @@ class Workbench(w.VBox):
             style={"button_width": "auto"},
         )
         self._scale = w.HTML(layout=w.Layout(height="100%"))
-        self._say = {name: _line("sb-say") for name in ("matrix", "subdiagonal", "deflations", "spectrum")}
+        self._say = {name: _line("sb-say", text) for name, text in _BEFORE_A_RUN.items()}
         titles = {
             "matrix": _title(
                 "H",
@@ -854,8 +861,8 @@ class _Latest:
                 self._failed(failure)
 
 
-def _line(name: str) -> Any:
-    widget = w.HTML()
+def _line(name: str, text: str = "") -> Any:
+    widget = w.HTML(f'<span class="sb-quiet">{text}</span>')
     widget.add_class(name)
     return widget
 

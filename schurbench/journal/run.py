@@ -37,6 +37,8 @@ class Run:
     matrix : WorkingMatrix
     settings : Settings
     preparation : Preparation
+    journal : Journal
+        What the other attributes and methods read; steps, checkpoints and the middle diagonals of H.
     stop : Stop
     seconds : float
         Wall time of preparation and iteration.

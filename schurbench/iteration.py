@@ -20,6 +20,7 @@ from schurbench.intake import WorkingMatrix, load
 from schurbench.journal.environment import environment
 from schurbench.journal.journal import Journal
 from schurbench.journal.records import (
+    SPIKE,
     Deflation,
     DeflationKind,
     Progress,
@@ -36,6 +37,7 @@ from schurbench.policy import (
     EXCEPTIONAL_PERIOD,
     Francis,
     Given,
+    Multishift,
     Rayleigh,
     ShiftStrategy,
     Wilkinson,
@@ -67,7 +69,7 @@ _ROUNDING_FIRST, _ROUNDING_EVERY = 6, 2
 #: Longest interval between two progress calls, seconds; more often would cost more than it tells.
 _PROGRESS_EVERY = 0.05
 
-_BUILT_IN = (Zero, Rayleigh, Wilkinson, Francis)
+_BUILT_IN = (Zero, Rayleigh, Wilkinson, Francis, Multishift)
 
 _KINDS = {
     (True, 1): StepKind.SINGLE,
@@ -134,6 +136,7 @@ class Iteration:
         self._tol = -1.0 if tol is None else float(tol)
         self._view = WindowView(self._H)
         self._trusted = type(self._strategy) in _BUILT_IN
+        self._looks = getattr(self._strategy, "deflation_window", None)
         self._window: Window = (0, self.n)
         self._fresh = True  # nothing has been scanned yet
         self._waited = 0
@@ -265,28 +268,56 @@ class Iteration:
         window = self._window
         shifts: tuple[complex, ...] = ()
         exceptional = False
-        rotations = 0
+        rotations = rows = 0
+        spikes: tuple[float, ...] = ()
         kind = StepKind.SCAN
-        waited = self._waited
+        view = self._view
         if window[1]:
-            shifts, exceptional = self._propose(window)
-            kind = _KINDS[self._real, len(shifts)]
-            rotations = sweep(self._H, self._Qh, self._work, window, shifts, index)
+            view.window = window
+            view.waited = self._waited
+            view.sweep = self._sweeps
             found = len(deflations)
-            self._scan(index, deflations, before=False)
-            self._sweeps += 1
-            waited = 0 if len(deflations) > found else waited + 1
-        self._waited = waited
+            rows = min(int(self._looks(view)), window[1] - window[0]) if self._looks is not None else 0
+            if rows > 0:
+                kind = StepKind.WINDOW
+                spikes = self._look(index, window, rows, deflations)
+                self._scan(index, deflations, before=False)
+            else:
+                shifts, exceptional = self._propose()
+                kind = _KINDS.get((self._real, len(shifts)), StepKind.MANY)
+                rotations = sweep(self._H, self._Qh, self._work, window, shifts, index)
+                view.found = None
+                self._scan(index, deflations, before=False)
+                self._sweeps += 1
+                self._waited += 1
+            if len(deflations) > found:
+                self._waited = 0
+        handed_on = view.handed_on if rows > 0 else ()
         seconds = time.perf_counter() - began
-        step = Step(index, window, kind, shifts, exceptional, rotations, seconds, tuple(deflations))
+        step = Step(
+            index, window, kind, shifts, exceptional, rotations, seconds, tuple(deflations), rows, spikes, handed_on
+        )
         self._journal.add(step, self._H, self._Qh, self._window)
         return step
 
-    def _propose(self, window: Window) -> tuple[tuple[complex, ...], bool]:
+    def _look(self, index: int, window: Window, rows: int, out: list[Deflation]) -> tuple[float, ...]:
+        """Look into a deflation window; returns its spikes."""
+        from schurbench.kernels import deflate_window
+
+        with single_blas_thread():
+            outcome = deflate_window(self._H, self._Qh, window, rows, index)
+        lo, hi = window
+        for row, size, magnitude, threshold, values in outcome.deflated:
+            kind = DeflationKind.SINGLE if size == 1 else DeflationKind.PAIR
+            out.append(Deflation(index, row, size, kind, SPIKE, magnitude, threshold, values))
+            hi = row
+        self._window = (lo, hi) if hi > lo else (0, lo)
+        self._view.found = (window[1] - hi) / rows
+        self._view.handed_on = outcome.handed_on
+        return outcome.spikes
+
+    def _propose(self) -> tuple[tuple[complex, ...], bool]:
         view = self._view
-        view.window = window
-        view.waited = self._waited
-        view.sweep = self._sweeps
         period = self.settings.exceptional
         if period and self._waited and self._waited % period == 0:
             ordinary = self._strategy.shifts(view)
@@ -303,17 +334,23 @@ class Iteration:
             values = [complex(s) for s in shifts]
         except (TypeError, ValueError):
             raise SettingsError(f"the strategy proposed {shifts!r}; return a sequence of one or two numbers") from None
-        if len(values) not in (1, 2):
-            raise SettingsError(f"the strategy proposed {len(values)} shifts; return one or two")
+        if not values or (self._real and len(values) > 1 and len(values) % 2):
+            raise SettingsError(
+                f"the strategy proposed {len(values)} shifts; return one or two, or in real form an even number"
+            )
         if not all(cmath.isfinite(v) for v in values):
             raise SettingsError("the strategy proposed a shift that is NaN or infinite; return finite numbers")
-        if self._real and (values[0].imag if len(values) == 1 else abs(values[0].imag + values[1].imag)) != 0.0:
+        pairs = [values[i : i + 2] for i in range(0, len(values), 2)] if self._real else []
+        if any(
+            len(pair) == 2 and (pair[0].imag != 0.0 or pair[1].imag != 0.0) and pair[0] != pair[-1].conjugate()
+            for pair in pairs
+        ):
             raise SettingsError(
-                "the strategy proposed complex shifts that are no conjugate pair; return a pair or use form='complex'"
+                "the strategy proposed complex shifts that are no conjugate pair; return pairs or use form='complex'"
             )
-        if self._real and len(values) == 2 and values[0].imag != 0.0 and values[0].real != values[1].real:
+        if any(len(pair) == 1 and pair[0].imag != 0.0 for pair in pairs):
             raise SettingsError(
-                "the strategy proposed two complex shifts that are not conjugate; return a conjugate pair"
+                "the strategy proposed one complex shift in real form; return its conjugate too or use form='complex'"
             )
         largest = max(abs(v) for v in values)
         if largest > _LARGEST_SHIFT * self._norm:
@@ -397,8 +434,8 @@ def iterate(
     Parameters
     ----------
     matrix : WorkingMatrix, or anything `schurbench.load` accepts
-    strategy : {"auto", "zero", "rayleigh", "wilkinson", "francis", "given"} or ShiftStrategy
-        ``auto`` is francis in real form and wilkinson in complex form.
+    strategy : {"auto", "zero", "rayleigh", "wilkinson", "francis", "multishift", "given"} or ShiftStrategy
+        ``auto`` is multishift from n = 256 on; below, francis in real form and wilkinson in complex form.
     form : {"auto", "real", "complex"}
         ``auto``: a complex matrix is complex; a real one is real, except for wilkinson and for given shifts that are not
         closed under conjugation.
@@ -410,8 +447,8 @@ def iterate(
     tol : float, optional
         Absolute level, in working units of H, that replaces rounding level in the deflation test.
     exceptional : bool or int, optional
-        Exceptional shifts after so many sweeps without a deflation (True: 10; False or 0: never). None: on for all
-        strategies but zero and given.
+        Exceptional shifts after so many sweeps without a deflation (True: 10, for multishift 6; False or 0: never).
+        None: on for all strategies but zero and given.
     accumulate : bool
         Whether Z is formed; factors need it.
     limit : int, optional
@@ -507,7 +544,7 @@ def _resolve(
     if form == "real" and not matrix.is_real:
         raise SettingsError("a complex matrix has no real Schur form; use form='complex' or form='auto'")
     real = matrix.is_real and form != "complex"
-    policy = strategy_for(strategy, real=real, shifts=shifts)
+    policy = strategy_for(strategy, n=matrix.n, real=real, shifts=shifts)
     if real and form == "auto":
         real = getattr(policy, "form", "real") == "real"
     if real and isinstance(policy, Wilkinson) and not np.array_equal(matrix.array, matrix.array.T):
@@ -523,10 +560,11 @@ def _resolve(
         raise SettingsError(f"tol {tol!r} is no level; give a number of at least 0, or None for rounding level")
     if limit is not None and (isinstance(limit, bool) or not isinstance(limit, (int, np.integer)) or limit < 1):
         raise SettingsError(f"limit {limit!r} is no number of sweeps; give an integer of at least 1")
+    patience = int(getattr(policy, "patience", EXCEPTIONAL_PERIOD))
     if exceptional is None:
-        period = EXCEPTIONAL_PERIOD if getattr(policy, "exceptional", True) else 0
+        period = patience if getattr(policy, "exceptional", True) else 0
     elif isinstance(exceptional, bool):
-        period = EXCEPTIONAL_PERIOD if exceptional else 0
+        period = patience if exceptional else 0
     elif isinstance(exceptional, (int, np.integer)) and exceptional >= 0:
         period = int(exceptional)
     else:

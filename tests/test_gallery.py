@@ -23,7 +23,8 @@ from tests.gallery import lapack_types, matched_distance
 
 DATA = Path(__file__).parent / "data"
 
-REAL_STRATEGIES = ("zero", "rayleigh", "francis", "wilkinson")
+STRATEGIES = ("zero", "rayleigh", "francis", "wilkinson", "multishift")
+SOUND = ("francis", "wilkinson", "multishift")  # those that must converge
 
 
 def check(run: sb.Run, *, must_converge: bool) -> None:
@@ -62,9 +63,9 @@ def condition_numbers(a: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
 @pytest.mark.parametrize("n", [1, 2, 3, 5, 10, 16])
 def test_lapack_types_small(n: int, complex_: bool) -> None:
     for name, a in lapack_types(n, complex_):
-        for strategy in REAL_STRATEGIES:
-            run = sb.iterate(sb.load(a, name=name), strategy=strategy, limit=None if strategy[0] in "fw" else 150)
-            check(run, must_converge=strategy in ("francis", "wilkinson"))
+        for strategy in STRATEGIES:
+            run = sb.iterate(sb.load(a, name=name), strategy=strategy, limit=None if strategy in SOUND else 150)
+            check(run, must_converge=strategy in SOUND)
 
 
 @pytest.mark.slow
@@ -72,15 +73,15 @@ def test_lapack_types_small(n: int, complex_: bool) -> None:
 @pytest.mark.parametrize("n", [40, 100])
 def test_lapack_types_large(n: int, complex_: bool) -> None:
     for name, a in lapack_types(n, complex_):
-        for strategy in REAL_STRATEGIES:
+        for strategy in STRATEGIES:
             for balance in ("permute", "both"):
                 run = sb.iterate(
                     sb.load(a, name=name),
                     strategy=strategy,
                     balance=balance,
-                    limit=None if strategy[0] in "fw" else 300,
+                    limit=None if strategy in SOUND else 300,
                 )
-                check(run, must_converge=strategy in ("francis", "wilkinson"))
+                check(run, must_converge=strategy in SOUND)
 
 
 FRANK_12 = [  # Golub & Wilkinson, SIAM Review 18 (1976); Wilkinson, The Algebraic Eigenvalue Problem (1965)
@@ -110,7 +111,7 @@ PUBLISHED = {
 
 
 @pytest.mark.parametrize("balance", ["permute", "both"])
-@pytest.mark.parametrize("strategy", ["francis", "wilkinson"])
+@pytest.mark.parametrize("strategy", SOUND)
 @pytest.mark.parametrize("case", PUBLISHED)
 def test_published_eigenvalues(case: str, strategy: str, balance: str) -> None:
     a, published = PUBLISHED[case]
@@ -125,7 +126,7 @@ def test_published_eigenvalues(case: str, strategy: str, balance: str) -> None:
 
 def test_wilkinson_plus_has_its_close_pair() -> None:
     """W21+: the two largest are 10.74619418290339… and 7.16·10⁻¹⁴ less (Wilkinson 1965, ch. 5 §45)."""
-    for strategy in ("francis", "wilkinson"):
+    for strategy in SOUND:
         run = sb.iterate(gallery.wilkinson_plus(), strategy=strategy)
         values = np.sort(eigenvalues(run).real)[::-1]
         assert abs(values[0] - 10.74619418290339) < 1e-13
@@ -158,7 +159,7 @@ def test_skew_tridiagonal_near_underflow() -> None:
         a[0, 1], a[1, 0] = outer, -outer
         a[2, 3], a[3, 2] = inner, -inner
         a[1, 2], a[2, 1] = middle, -middle
-        for strategy in ("francis", "wilkinson"):
+        for strategy in SOUND:
             run = sb.iterate(a, strategy=strategy)
             check(run, must_converge=True)
             exact = np.array([1j * outer, -1j * outer, 1j * inner, -1j * inner])
@@ -181,7 +182,7 @@ def load_certified(name: str) -> tuple[np.ndarray, np.ndarray]:
 CERTIFIED = sorted(p.stem for p in (DATA / "certified").glob("*.json"))
 
 
-@pytest.mark.parametrize("strategy", ["francis", "wilkinson"])
+@pytest.mark.parametrize("strategy", SOUND)
 @pytest.mark.parametrize("name", CERTIFIED)
 def test_certified_eigenvalues(name: str, strategy: str) -> None:
     """Certified by exact characteristic polynomials (tests/data/README.md): each within its condition number."""
@@ -216,13 +217,13 @@ def test_certified_eigenvalues(name: str, strategy: str) -> None:
 FILES = sorted([*DATA.glob("*.npz"), *DATA.glob("*.mtx")])
 
 
-@pytest.mark.parametrize("strategy", REAL_STRATEGIES)
+@pytest.mark.parametrize("strategy", STRATEGIES)
 @pytest.mark.parametrize("path", FILES, ids=[p.name for p in FILES])
 def test_real_matrices_with_every_strategy(path: Path, strategy: str) -> None:
     m = sb.load(path)
     for balance in ("permute", "both"):
-        run = sb.iterate(m, strategy=strategy, balance=balance, limit=None if strategy[0] in "fw" else 400)
-        check(run, must_converge=strategy in ("francis", "wilkinson"))
+        run = sb.iterate(m, strategy=strategy, balance=balance, limit=None if strategy in SOUND else 400)
+        check(run, must_converge=strategy in SOUND)
 
 
 def test_spectra_agree_with_lapack() -> None:
@@ -233,7 +234,7 @@ def test_spectra_agree_with_lapack() -> None:
         a = rng.standard_normal((n, n))
         _, condition = condition_numbers(a)
         reference = np.diag(scipy.linalg.schur(a, output="complex")[0])
-        for strategy in ("francis", "wilkinson"):
+        for strategy in SOUND:
             found = eigenvalues(sb.iterate(a, strategy=strategy))
             bound = 20 * n * ULP * np.linalg.norm(a, 2) * condition.max()
             assert matched_distance(found, reference).max() <= bound, f"seed {seed}"

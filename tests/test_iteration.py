@@ -12,9 +12,9 @@ import schurbench as sb
 from schurbench.journal import DeflationKind, StepKind, StopReason
 from schurbench.measures import RATIO_LIMIT, orthogonality_ratio, residual_ratio
 from schurbench.policy import Francis, Given, WindowView
-from tests.gallery import cyclic, day
+from tests.gallery import cyclic, day, matched_distance
 
-STRATEGIES = ("zero", "rayleigh", "wilkinson", "francis")
+STRATEGIES = ("zero", "rayleigh", "wilkinson", "francis", "multishift")
 
 
 def gaussian(n: int, seed: int, complex_: bool = False) -> np.ndarray:
@@ -51,10 +51,10 @@ def test_a_run_is_stepping_by_hand(strategy: str, complex_: bool) -> None:
         by_hand.step()
 
 
-@pytest.mark.parametrize("strategy", ["francis", "wilkinson"])
-def test_states_out_of_order_and_across_checkpoints(strategy: str) -> None:
+@pytest.mark.parametrize(("strategy", "complex_"), [("francis", False), ("wilkinson", False), ("multishift", True)])
+def test_states_out_of_order_and_across_checkpoints(strategy: str, complex_: bool) -> None:
     """Jumping back and forth gives the same bytes as walking, whatever the checkpoint budget."""
-    a = gaussian(60, 8)
+    a = gaussian(60, 8, complex_)
     rich = sb.iterate(a, strategy=strategy)
     poor = sb.iterate(a, strategy=strategy, keep=0)
     assert len(rich.steps) > 64
@@ -76,6 +76,37 @@ def test_checkpoints_stay_within_their_budget() -> None:
     assert held <= run.settings.keep
 
 
+@pytest.mark.parametrize("complex_", [False, True])
+def test_deflation_windows_are_recorded(complex_: bool) -> None:
+    """What a window finds is what the definition says (Braman, Byers & Mathias 2002, part II, §2), by numpy."""
+    a = gaussian(90, 4, complex_)
+    run = sb.iterate(a, "multishift")
+    assert run.converged
+    looked = [step for step in run.steps if step.kind is StepKind.WINDOW]
+    assert looked
+    assert sum(d.size for step in looked for d in step.deflations if d.test == "spike") > 20
+    for step in looked[:12]:
+        before = run.state(step.index - 1).H
+        lo, hi = step.window
+        top = max(lo, hi - step.rows)
+        w, v = np.linalg.eig(before[top:hi, top:hi])
+        assert not step.shifts
+        assert len(step.spikes) == hi - top
+        # together the spikes are the subdiagonal entry turned by a unitary matrix
+        beside = abs(before[top, top - 1]) if top > lo else 0.0
+        assert np.linalg.norm(step.spikes) == pytest.approx(beside, rel=1e-12)
+        values = [x for d in step.deflations if d.test == "spike" for x in d.eigenvalues] + list(step.handed_on)
+        assert matched_distance(np.array(values), w).max() < 1e-8
+        for d in step.deflations:
+            if d.test == "spike":
+                assert d.magnitude <= d.threshold
+    many = [step for step in run.steps if step.kind is StepKind.MANY]
+    assert many
+    for step in many:
+        earlier = [s for s in looked if s.index < step.index][-1]
+        assert set(step.shifts) <= set(earlier.handed_on) or step.exceptional
+
+
 @pytest.mark.parametrize("strategy", STRATEGIES)
 @pytest.mark.parametrize("complex_", [False, True])
 def test_rotations_one_by_one(strategy: str, complex_: bool) -> None:
@@ -84,8 +115,8 @@ def test_rotations_one_by_one(strategy: str, complex_: bool) -> None:
     for k in (1, 2, 7):
         step = run.steps[k - 1]
         rotations = run.rotations(k)
-        per_side = step.rotations if step.kind is not StepKind.TWIN_SINGLE else step.rotations // 2
-        assert per_side == step.window[1] - step.window[0] - 1
+        bulges = len(step.shifts) if complex_ or len(step.shifts) == 1 else len(step.shifts) // 2
+        assert step.rotations == bulges * (step.window[1] - step.window[0] - 1)
         assert sum(r.side in ("left", "both") for r in rotations) == step.rotations
         for r in rotations:
             np.testing.assert_allclose(r.matrix @ r.matrix.conj().T, np.eye(len(r.matrix)), atol=1e-14)
@@ -148,6 +179,9 @@ def test_forms() -> None:
     assert sb.iterate(real).settings.form == "real"
     assert sb.iterate(real).settings.strategy == "francis"
     assert sb.iterate(complex_).settings.strategy == "wilkinson"
+    large = np.diag(np.arange(300.0))
+    assert sb.iterate(large).settings.strategy == "multishift"
+    assert sb.iterate(large.astype(complex)).settings.strategy == "multishift"
     for strategy, form in (("zero", "real"), ("rayleigh", "real"), ("francis", "real"), ("wilkinson", "complex")):
         assert sb.iterate(real, strategy=strategy, limit=5).settings.form == form
         assert sb.iterate(complex_, strategy=strategy, limit=5).settings.form == "complex"
@@ -203,7 +237,10 @@ def test_own_strategy() -> None:
 
     for value, words in [
         ([], "one or two"),
-        ([1.0, 2.0, 3.0], "one or two"),
+        ([1.0, 2.0, 3.0], "even number"),
+        ([1j], "conjugate too"),
+        ([1j, 2j], "conjugate pair"),
+        ([1j, -1j, 1.0, 2j], "conjugate pair"),
         ([float("nan")], "NaN"),
         ([1e30], "norms"),
         (["a"], "numbers"),
@@ -234,7 +271,6 @@ def test_own_strategy() -> None:
         ({"limit": 2.5}, "limit"),
         ({"exceptional": "often"}, "exceptional"),
         ({"keep": "lots"}, "keep"),
-        ({"strategy": "multishift"}, "multishift"),
     ],
 )
 def test_settings_that_cannot_be_carried_out(keywords: dict[str, object], words: str) -> None:
@@ -360,7 +396,7 @@ def test_extreme_magnitudes_are_worked_on_in_scaled_units(exponent: int) -> None
 
 
 def test_saved_runs_reopen_with_the_same_bytes(tmp_path: Path) -> None:
-    for strategy, complex_ in (("francis", False), ("wilkinson", True), ("zero", False)):
+    for strategy, complex_ in (("francis", False), ("wilkinson", True), ("zero", False), ("multishift", False)):
         a = gaussian(40, 1, complex_)
         m = sb.load(a, labels=[f"x{i}" for i in range(40)])
         run = sb.iterate(m, strategy=strategy, limit=150, balance="both")

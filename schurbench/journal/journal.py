@@ -7,8 +7,9 @@ from copy import copy
 
 import numpy as np
 
-from schurbench.journal.records import DeflationKind, Step, Window
+from schurbench.journal.records import SPIKE, Deflation, DeflationKind, Step, Window
 from schurbench.measures import Array
+from schurbench.prepare.preparation import single_blas_thread
 
 __all__ = ["Journal", "replay_step"]
 
@@ -151,13 +152,17 @@ class Journal:
 
 def replay_step(H: Array, Qh: Array, work: object, step: Step) -> None:
     """Carry out a recorded step again, in place. It follows the record and decides nothing."""
-    from schurbench.kernels import deflate, sweep
+    from schurbench.kernels import deflate, deflate_window, sweep
 
-    for deflation in step.deflations:
-        if deflation.before_sweep:
-            deflate(H, Qh, deflation.row, 0 if deflation.kind is DeflationKind.SPLIT else deflation.size)
-    if step.shifts:
+    def follow(deflations: Iterable[Deflation]) -> None:
+        for deflation in deflations:
+            if deflation.test != SPIKE:  # those are part of looking into the window
+                deflate(H, Qh, deflation.row, 0 if deflation.kind is DeflationKind.SPLIT else deflation.size)
+
+    follow(d for d in step.deflations if d.before_sweep)
+    if step.rows:
+        with single_blas_thread():
+            deflate_window(H, Qh, step.window, step.rows, step.index)
+    elif step.shifts:
         sweep(H, Qh, work, step.window, step.shifts, step.index)
-    for deflation in step.deflations:
-        if not deflation.before_sweep:
-            deflate(H, Qh, deflation.row, 0 if deflation.kind is DeflationKind.SPLIT else deflation.size)
+    follow(d for d in step.deflations if not d.before_sweep)

@@ -12,6 +12,7 @@ import numpy.typing as npt
 from schurbench.measures import Array
 
 __all__ = [
+    "SPIKE",
     "Deflation",
     "DeflationKind",
     "Progress",
@@ -29,12 +30,18 @@ __all__ = [
 Window = tuple[int, int]
 
 
+#: Name of the test that a deflation window applies.
+SPIKE = "spike"
+
+
 class StepKind(StrEnum):
     """What one step did to the active window."""
 
     SINGLE = "single"  #: explicit single-shift step: QR by rotations from the left, the same from the right
     DOUBLE = "double"  #: implicit double-shift sweep in real arithmetic
     TWIN_SINGLE = "two singles"  #: two explicit single-shift steps in complex arithmetic
+    MANY = "many shifts"  #: several bulges, or single-shift steps, one after the other
+    WINDOW = "deflation window"  #: a deflation window was looked into (aggressive early deflation); no sweep
     SCAN = "scan"  #: no sweep: everything left was negligible or solved directly
 
 
@@ -69,7 +76,7 @@ class Deflation:
         Rows split off: 1, 2, or for a split the rows below the entry in the window.
     kind : DeflationKind
     test : str
-        Deflation test that judged the entry.
+        Deflation test that judged the entry; ``"spike"`` in a deflation window, where the magnitude is that of the spike.
     magnitude : float
         |h[row, row−1]| before it was set to zero, in the working units of H; 0 where it was zero or row = 0.
     threshold : float
@@ -93,7 +100,7 @@ class Deflation:
 
 @dataclass(frozen=True, slots=True)
 class Step:
-    """One call of `Iteration.step`: at most one sweep, then a scan for negligible entries.
+    """One call of `Iteration.step`: at most one sweep or one deflation window, then a scan for negligible entries.
 
     Attributes
     ----------
@@ -111,6 +118,12 @@ class Step:
     seconds : float
         Wall time of the step.
     deflations : tuple of Deflation
+    rows : int
+        Rows of the deflation window that was looked into, 0 for other kinds of step.
+    spikes : tuple of float
+        Magnitudes beside the window's Schur form before anything was deflated, top to bottom.
+    handed_on : tuple of complex
+        Eigenvalues the window left as shifts for the next sweep, most promising first.
     """
 
     index: int
@@ -121,6 +134,9 @@ class Step:
     rotations: int
     seconds: float
     deflations: tuple[Deflation, ...] = ()
+    rows: int = 0
+    spikes: tuple[float, ...] = ()
+    handed_on: tuple[complex, ...] = ()
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -8,7 +8,7 @@ from typing import overload
 import numpy as np
 
 from schurbench.journal.journal import Journal
-from schurbench.journal.records import DeflationKind, Rotation, Step, StepKind
+from schurbench.journal.records import DeflationKind, Rotation, Step
 from schurbench.measures import Array
 
 __all__ = ["Rotations"]
@@ -19,14 +19,15 @@ class Rotations(Sequence[Rotation]):
 
     An explicit single-shift step is listed as n−1 rotations from the left followed by the same from the right; between
     them the window holds H − σI on its way to R and to RQ, and after the last one σI has been added back. A double-shift
-    sweep is listed as reflectors that act from both sides at once, as the method is written.
+    sweep is listed as reflectors that act from both sides at once, as the method is written; several shifts follow one
+    another. A deflation window is not made of single rotations and lists none.
 
     The small matrices are those of the run, bit for bit. The matrices between them are formed here one rotation at a
     time and so agree with the recorded state after the step to rounding, not to the last bit.
     """
 
     def __init__(self, journal: Journal, step: Step) -> None:
-        from schurbench.kernels import Workspace, deflate, join, sweep
+        from schurbench.kernels import APART, Workspace, deflate, join, sweep
 
         H, Qh = journal.rebuild(step.index - 1)
         H, Qh = H.copy(), Qh.copy()
@@ -39,15 +40,16 @@ class Rotations(Sequence[Rotation]):
         work = Workspace(H)
         none = Qh[..., :0, :]
         acts: list[tuple[int, str, Array, complex]] = []  # row, side, G, shift to subtract before or add after
-        if step.kind is StepKind.DOUBLE:
-            sweep(H, none, work, step.window, step.shifts, step.index)
-            for k in range(lo, hi - 1):
-                v = np.array([1.0, work.V[k, 1], work.V[k, 2]][: min(3, hi - k)])
-                acts.append((k, "both", np.eye(len(v)) - work.V[k, 0] * np.outer(v, v), 0.0))
-        elif step.shifts:
-            for shift in step.shifts:
+        if H.ndim == 2 and len(step.shifts) > 1:
+            for i in range(0, len(step.shifts), 2):
+                sweep(H, none, work, step.window, step.shifts[i : i + 2], step.index + APART * i)
+                for k in range(lo, hi - 1):
+                    v = np.array([1.0, work.V[k, 1], work.V[k, 2]][: min(3, hi - k)])
+                    acts.append((k, "both", np.eye(len(v)) - work.V[k, 0] * np.outer(v, v), 0.0))
+        else:
+            for i, shift in enumerate(step.shifts):
                 typed = shift.real if H.ndim == 2 else shift
-                sweep(H, none, work, step.window, (shift,), step.index)
+                sweep(H, none, work, step.window, (shift,), step.index + APART * i)
                 S = join(work.S[..., None, :])[0]
                 for side in ("left", "right"):
                     for k in range(lo, hi - 1):

@@ -19,6 +19,7 @@ from schurbench.errors import InputError
 from schurbench.intake import WorkingMatrix
 from schurbench.journal.journal import Journal
 from schurbench.journal.records import (
+    SPIKE,
     Deflation,
     DeflationKind,
     Settings,
@@ -111,6 +112,16 @@ def save_run(run: Run, path: Path, *, replace: bool) -> Path:
 def open_run(path: str | Path) -> Run:
     """Reopen a run that was saved with `Run.save`.
 
+    Parameters
+    ----------
+    path : str or Path
+        The file; recognised by its content, whatever its name.
+
+    Returns
+    -------
+    Run
+        With the same bytes in every state as the run that was saved.
+
     Raises
     ------
     InputError
@@ -195,6 +206,8 @@ def _columns(steps: list[Step]) -> dict[str, npt.NDArray[Any]]:
     deflations = [d for step in steps for d in step.deflations]
     shifts = [s for step in steps for s in step.shifts]
     values = [v for d in deflations for v in d.eigenvalues]
+    spikes = [v for step in steps for v in step.spikes]
+    handed_on = [v for step in steps for v in step.handed_on]
     return {
         "step_kind": np.array([_STEP_KINDS.index(s.kind) for s in steps], dtype=np.int64),
         "step_window": np.array([s.window for s in steps], dtype=np.int64).reshape(-1, 2),
@@ -202,13 +215,19 @@ def _columns(steps: list[Step]) -> dict[str, npt.NDArray[Any]]:
         "step_exceptional": np.array([s.exceptional for s in steps], dtype=np.bool_),
         "step_rotations": np.array([s.rotations for s in steps], dtype=np.int64),
         "step_seconds": np.array([s.seconds for s in steps], dtype=np.float64),
+        "step_rows": np.array([s.rows for s in steps], dtype=np.int64),
+        "step_spikes": np.array([len(s.spikes) for s in steps], dtype=np.int64),
+        "step_handed_on": np.array([len(s.handed_on) for s in steps], dtype=np.int64),
         "shifts": np.array(shifts, dtype=np.complex128),
+        "spikes": np.array(spikes, dtype=np.float64),
+        "handed_on": np.array(handed_on, dtype=np.complex128),
         "deflation_step": np.array([d.step for d in deflations], dtype=np.int64),
         "deflation_row": np.array([d.row for d in deflations], dtype=np.int64),
         "deflation_size": np.array([d.size for d in deflations], dtype=np.int64),
         "deflation_kind": np.array([_DEFLATION_KINDS.index(d.kind) for d in deflations], dtype=np.int64),
         "deflation_magnitude": np.array([d.magnitude for d in deflations], dtype=np.float64),
         "deflation_threshold": np.array([d.threshold for d in deflations], dtype=np.float64),
+        "deflation_spike": np.array([d.test == SPIKE for d in deflations], dtype=np.bool_),
         "deflation_before": np.array([d.before_sweep for d in deflations], dtype=np.bool_),
         "deflation_values": np.array([len(d.eigenvalues) for d in deflations], dtype=np.int64),
         "eigenvalues": np.array(values, dtype=np.complex128),
@@ -226,7 +245,7 @@ def _steps(arrays: dict[str, npt.NDArray[Any]], test: str) -> list[Step]:
                 row=int(arrays["deflation_row"][i]),
                 size=int(arrays["deflation_size"][i]),
                 kind=_DEFLATION_KINDS[int(arrays["deflation_kind"][i])],
-                test=test,
+                test=SPIKE if arrays["deflation_spike"][i] else test,
                 magnitude=float(arrays["deflation_magnitude"][i]),
                 threshold=float(arrays["deflation_threshold"][i]),
                 eigenvalues=tuple(arrays["eigenvalues"][at : at + count].tolist()),
@@ -235,9 +254,10 @@ def _steps(arrays: dict[str, npt.NDArray[Any]], test: str) -> list[Step]:
         )
         at += count
     steps = []
-    at = 0
+    at = at_spike = at_handed = 0
     for i, kind in enumerate(arrays["step_kind"].tolist()):
         count = int(arrays["step_shifts"][i])
+        spikes, handed = int(arrays["step_spikes"][i]), int(arrays["step_handed_on"][i])
         lo, hi = arrays["step_window"][i].tolist()
         steps.append(
             Step(
@@ -249,7 +269,10 @@ def _steps(arrays: dict[str, npt.NDArray[Any]], test: str) -> list[Step]:
                 rotations=int(arrays["step_rotations"][i]),
                 seconds=float(arrays["step_seconds"][i]),
                 deflations=tuple(by_step.get(i + 1, ())),
+                rows=int(arrays["step_rows"][i]),
+                spikes=tuple(arrays["spikes"][at_spike : at_spike + spikes].tolist()),
+                handed_on=tuple(arrays["handed_on"][at_handed : at_handed + handed].tolist()),
             )
         )
-        at += count
+        at, at_spike, at_handed = at + count, at_spike + spikes, at_handed + handed
     return steps

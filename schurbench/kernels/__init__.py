@@ -13,16 +13,20 @@ from functools import partial
 import numpy as np
 
 from schurbench.kernels.blocks import deflation_threshold
-from schurbench.kernels.engine import bands, deflate, scan, sweep
+from schurbench.kernels.deflation_window import WindowOutcome, deflate_window
+from schurbench.kernels.engine import APART, bands, deflate, scan, sweep
 from schurbench.kernels.planes import join, split
 from schurbench.kernels.sweeps import single_shift_step
 from schurbench.kernels.workspace import Workspace
 
 __all__ = [
+    "APART",
+    "WindowOutcome",
     "Workspace",
     "bands",
     "cache_directory",
     "deflate",
+    "deflate_window",
     "deflation_threshold",
     "join",
     "scan",
@@ -60,6 +64,8 @@ def warm() -> dict[str, float]:
         calls.append(
             ("threshold", partial(deflation_threshold, out[0, 0], out[0, 1], 1.0, 1.0, 1.0, 1.0, 1, -1.0, 1.0))
         )
+        many = split(np.triu(np.ones((8, 8)) + np.diag(np.arange(8.0)), -1) * (1.0 if kind == "real" else 1.0 + 0.5j))
+        calls.append(("deflation window", partial(deflate_window, many, many[..., :0, :], (0, 8), 6, 1)))
         for name, call in calls:
             began = time.perf_counter()
             call()

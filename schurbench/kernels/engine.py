@@ -19,7 +19,10 @@ from schurbench.kernels.blocks import (
 from schurbench.kernels.sweeps import double_shift_sweep, single_shift_step, single_shift_step_complex
 from schurbench.kernels.workspace import Workspace
 
-__all__ = ["bands", "deflate", "scan", "sweep"]
+__all__ = ["APART", "bands", "deflate", "scan", "sweep"]
+
+#: The i-th shift of a step rounds as if the step had this many times i added to its index, so that no two round alike.
+APART = 7919
 
 
 def sweep(
@@ -27,18 +30,20 @@ def sweep(
 ) -> int:
     """One sweep on the window; returns the number of rotations (reflectors for a double shift).
 
-    One shift is an explicit single-shift step. Two shifts are an implicit double-shift sweep on a real H and two
-    single-shift steps on a complex one. ``index`` is that of the step, by which last bits are rounded in turn.
+    One shift is an explicit single-shift step. More are taken two by two, in implicit double-shift sweeps, on a real H,
+    and in single-shift steps on a complex one. ``index`` is that of the step, by which last bits are rounded in turn.
     """
     lo, hi = window
-    if H.ndim == 2:
-        if len(shifts) == 2:
-            first, second = shifts
-            return double_shift_sweep(H, Qh, lo, hi, first.real, first.imag, second.real, second.imag, work.V, index)
-        return single_shift_step(H, Qh, lo, hi, shifts[0].real, work.C, work.S, index)
     rotations = 0
-    for shift in shifts:
-        rotations += single_shift_step_complex(H, Qh, lo, hi, complex(shift), work.C, work.S, index)
+    if H.ndim == 3:
+        for i, shift in enumerate(shifts):
+            rotations += single_shift_step_complex(H, Qh, lo, hi, complex(shift), work.C, work.S, index + APART * i)
+    elif len(shifts) == 1:
+        rotations = single_shift_step(H, Qh, lo, hi, shifts[0].real, work.C, work.S, index)
+    else:
+        for i in range(0, len(shifts), 2):
+            a, b = shifts[i], shifts[i + 1]
+            rotations += double_shift_sweep(H, Qh, lo, hi, a.real, a.imag, b.real, b.imag, work.V, index + APART * i)
     return rotations
 
 

@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
+from schurbench.policy.choose import MULTISHIFT_FROM, STRATEGIES, strategy_for
 from schurbench.policy.deflation import DEFLATION_TESTS, DeflationTest, deflation_test
 from schurbench.policy.exceptional import EXCEPTIONAL_PERIOD, exceptional_shifts
+from schurbench.policy.multishift import Multishift
 from schurbench.policy.strategies import (
-    STRATEGIES,
     Francis,
     Given,
     Rayleigh,
@@ -13,16 +14,17 @@ from schurbench.policy.strategies import (
     Wilkinson,
     WindowView,
     Zero,
-    strategy_for,
 )
 
 __all__ = [
     "DEFLATION_TESTS",
     "EXCEPTIONAL_PERIOD",
+    "MULTISHIFT_FROM",
     "STRATEGIES",
     "DeflationTest",
     "Francis",
     "Given",
+    "Multishift",
     "Rayleigh",
     "ShiftStrategy",
     "Wilkinson",

@@ -27,7 +27,7 @@ def exceptional_shifts(view: WindowView, turn: int, count: int, real: bool) -> t
         How many exceptional shifts this window has had; even turns look at the bottom of the window, odd ones at the
         top, as dlahqr.f does, because either end may be the one that is stuck.
     count : int
-        1 or 2 shifts wanted.
+        How many the ordinary proposal had; one is returned for one, two for more.
     real : bool
         Whether a single shift must be real.
     """

@@ -1,9 +1,11 @@
 """Shift strategies: each proposes the shifts of the next sweep from a read-only view of the active window.
 
 A strategy of one's own is any object with a ``shifts(view)`` method that returns one shift (an explicit single-shift
-step) or two (a double-shift sweep), in the working units of H. In real form one shift must be real and two must both be
+step), two (a double-shift sweep) or more (taken two by two), in the working units of H. In real form one shift must be real and two must both be
 real or conjugate. Optional attributes: ``name`` (shown in results), ``form`` (``"real"`` or ``"complex"``, what
-``form="auto"`` means for a real matrix), ``exceptional`` (False to stay pure unless the caller asks otherwise).
+``form="auto"`` means for a real matrix), ``exceptional`` (False to stay pure unless the caller asks otherwise),
+``patience`` (sweeps without a deflation before an exceptional shift), and a method ``deflation_window(view)`` that returns
+how many rows of a deflation window to look into now, or 0 to sweep; what it leaves is in ``view.handed_on`` then.
 """
 
 from __future__ import annotations
@@ -16,7 +18,6 @@ from schurbench.errors import SettingsError
 from schurbench.measures import Array
 
 __all__ = [
-    "STRATEGIES",
     "Francis",
     "Given",
     "Rayleigh",
@@ -24,7 +25,6 @@ __all__ = [
     "Wilkinson",
     "WindowView",
     "Zero",
-    "strategy_for",
 ]
 
 
@@ -41,9 +41,13 @@ class WindowView:
         Sweeps done so far in the whole run.
     real : bool
         Whether H is real.
+    found : float or None
+        Share of the last deflation window that deflated; None when none was looked into since the last sweep.
+    handed_on : tuple of complex
+        Eigenvalues the last deflation window left, most promising first, conjugates side by side.
     """
 
-    __slots__ = ("_planes", "real", "sweep", "waited", "window")
+    __slots__ = ("_planes", "found", "handed_on", "real", "sweep", "waited", "window")
 
     def __init__(self, planes: Array) -> None:
         self._planes = planes.view()
@@ -52,6 +56,8 @@ class WindowView:
         self.window = (0, planes.shape[-1])
         self.waited = 0
         self.sweep = 0
+        self.found: float | None = None
+        self.handed_on: tuple[complex, ...] = ()
 
     @property
     def H(self) -> Array:
@@ -227,53 +233,3 @@ class Given:
         if view.real:
             return self._real_sweeps[view.sweep % len(self._real_sweeps)]
         return (self.values[view.sweep % len(self.values)],)
-
-
-STRATEGIES = ("auto", "zero", "rayleigh", "wilkinson", "francis", "given")
-
-_SIMPLE: dict[str, type] = {"zero": Zero, "rayleigh": Rayleigh, "wilkinson": Wilkinson, "francis": Francis}
-
-
-def strategy_for(
-    strategy: str | ShiftStrategy, *, real: bool, shifts: Sequence[complex] | None = None
-) -> ShiftStrategy:
-    """Turn the ``strategy`` keyword into an object.
-
-    Parameters
-    ----------
-    strategy : str or ShiftStrategy
-    real : bool
-        Whether the run will be in real arithmetic where that is possible; ``auto`` chooses francis then, and wilkinson
-        otherwise.
-    shifts : sequence of complex, optional
-        For ``given`` only.
-
-    Raises
-    ------
-    SettingsError
-        Unknown name, missing or superfluous ``shifts``, or an object without a ``shifts`` method.
-    """
-    if strategy == "given":
-        if shifts is None:
-            raise SettingsError("strategy 'given' needs its list of shifts; pass shifts=[...]")
-        return Given(shifts)
-    if shifts is not None:
-        raise SettingsError("shifts are only used by strategy 'given'; name that strategy or leave shifts out")
-    if isinstance(strategy, str):
-        if strategy == "auto":
-            return Francis() if real else Wilkinson()
-        if strategy in _SIMPLE:
-            made: ShiftStrategy = _SIMPLE[strategy]()
-            return made
-        if strategy == "multishift":
-            raise SettingsError(
-                "strategy 'multishift' is not in this version; use 'francis' (real) or 'wilkinson' (complex)"
-            )
-        raise SettingsError(
-            f"strategy {strategy!r} is unknown; choose one of {', '.join(STRATEGIES)}, or pass an object"
-        )
-    if not callable(getattr(strategy, "shifts", None)):
-        raise SettingsError(
-            f"strategy of type {type(strategy).__name__} has no shifts(view) method; see schurbench.policy.ShiftStrategy"
-        )
-    return strategy

@@ -1,6 +1,8 @@
 """Schur decompositions that can be watched, explained, compared and handed on.
 
-One matrix walks through the rooms of this package in order, and each room imports only the ones before it:
+One matrix walks through the rooms of this package in order, and each room imports only the ones before it (the iteration and its
+journal share a place). Below them all lie `schurbench.errors`, `schurbench.measures`, where the limit of a certificate is named, and
+`schurbench.matching`, which pairs spectra.
 
 1. `schurbench.intake` reads files and arrays into a `WorkingMatrix` and knows the demonstration plant.
 2. `schurbench.prepare` says what kind of matrix it is (`profile`) and brings it to Hessenberg form.
@@ -13,7 +15,8 @@ One matrix walks through the rooms of this package in order, and each room impor
 9. `schurbench.factors` turns a run into Schur factors with a certificate, and writes them.
 10. `schurbench.panels` and `schurbench.cli` are two faces on the same rooms.
 
-Names are loaded on first use, so ``import schurbench`` compiles nothing and imports neither numba nor widgets.
+DEVELOPERS.md in the repository leads one matrix through the files of these rooms. Names are loaded on first use, so
+``import schurbench`` compiles nothing and imports neither numba nor widgets.
 """
 
 from __future__ import annotations

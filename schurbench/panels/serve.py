@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import json
 import os
+import signal
 import subprocess
 import sys
 import tempfile
+import threading
 from importlib.util import find_spec
 from pathlib import Path
 from typing import Any
@@ -20,6 +22,9 @@ __all__ = ["lab_command", "lab_environment", "open_workbench", "page_command", "
 #: Largest message the page may send. A matrix of order 2000 is 32 MB, and uploads travel as text; the default of the
 #: server, 10 MB, drops larger ones without a word.
 MESSAGE_LIMIT = 512 << 20
+
+#: Seconds a server may take to close its kernels after an interrupt before it is told again.
+_PATIENCE = 5.0
 
 _ANNOUNCEMENTS = "@jupyterlab/apputils-extension:announcements"
 
@@ -188,12 +193,26 @@ def open_workbench(
             written = write_notebook(notebook, Path(scratch), stem)
         print(f"Workbench notebook: {written}. Stop the server with Ctrl+C.", file=sys.stderr)
         command = page_command(written, browser=browser) if page else lab_command(written, browser=browser)
-        server = subprocess.Popen(command, env=lab_environment(Path(scratch) / "settings"))
+        return _until_stopped(subprocess.Popen(command, env=lab_environment(Path(scratch) / "settings")))
+
+
+def _until_stopped(server: subprocess.Popen[bytes]) -> int:
+    """Wait for the server; whoever stops this process stops the server with it."""
+    main = threading.current_thread() is threading.main_thread()
+    before = signal.signal(signal.SIGTERM, lambda *_: server.terminate()) if main else None
+    try:
         while True:
             try:
                 return server.wait()
             except KeyboardInterrupt:
-                continue  # the server received it too and closes its kernels first
+                # From a terminal the server got the interrupt too and is closing its kernels; from elsewhere it did not.
+                try:
+                    return server.wait(_PATIENCE)
+                except subprocess.TimeoutExpired:
+                    server.terminate()
+    finally:
+        if main:
+            signal.signal(signal.SIGTERM, before)
 
 
 def _plain_stem(name: str) -> str:

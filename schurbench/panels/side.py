@@ -14,7 +14,9 @@ import ipywidgets as w
 from schurbench.errors import SettingsError
 from schurbench.measures import RATIO_LIMIT
 from schurbench.panels.text import duration
+from schurbench.policy import DEFLATION_TESTS, STRATEGIES
 from schurbench.prepare.plain import number
+from schurbench.prepare.preparation import BALANCE_CHOICES
 
 if TYPE_CHECKING:
     from schurbench.comparison import Comparison
@@ -32,10 +34,7 @@ __all__ = [
     "shift_list",
 ]
 
-STRATEGIES = ("auto", "francis", "wilkinson", "rayleigh", "zero", "given")
 FORMS = ("auto", "real", "complex")
-BALANCES = ("none", "permute", "scale", "both")
-TESTS = ("ahues-tisseur", "neighbour", "norm")
 
 #: Largest file that is also offered as a link; the link carries the whole file.
 LINK_LIMIT = 4 << 20
@@ -104,7 +103,7 @@ class SettingsForm:
         )
         self.form = row(w.Dropdown(options=FORMS, description="Form"), "Real or complex arithmetic and Schur form")
         self.balance = row(
-            w.Dropdown(options=BALANCES, description="Balance"),
+            w.Dropdown(options=BALANCE_CHOICES, description="Balance"),
             "Permute isolated eigenvalues out, scale rows and columns",
         )
         self.flip = w.Checkbox(
@@ -114,7 +113,8 @@ class SettingsForm:
             tooltip="Reverse rows and columns first, for matrices graded from small to large",
         )
         self.deflation = row(
-            w.Dropdown(options=TESTS, description="Deflation"), "Which subdiagonal entries count as negligible"
+            w.Dropdown(options=tuple(DEFLATION_TESTS), description="Deflation"),
+            "Which subdiagonal entries count as negligible",
         )
         self.tol = row(
             w.Text(description="Tolerance", placeholder="rounding level", continuous_update=False),

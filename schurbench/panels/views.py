@@ -442,9 +442,8 @@ def track_sentence(run: Run, cursor: int) -> str:
     if cursor == 0:
         return f"Start: the Hessenberg form of {run.matrix.name}. {plural(last, 'step')} recorded."
     step = run.steps[cursor - 1]
-    kind = {"single": "single shift", "double": "double shift", "two singles": "two single shifts"}.get(
-        str(step.kind), "no sweep needed"
-    )
+    kinds = {"single": "single shift", "double": "double shift", "two singles": "two single shifts"}
+    kind = "no sweep needed" if step.kind == "scan" else kinds.get(str(step.kind), str(step.kind))
     text = f"Step {cursor} of {last}: {kind}, {rows(step.window)}"
     if step.exceptional:
         text += ", exceptional"

@@ -29,10 +29,7 @@ from schurbench.panels.figures import (
     scale_html,
 )
 from schurbench.panels.side import (
-    BALANCES,
     FORMS,
-    STRATEGIES,
-    TESTS,
     ComparisonForm,
     FindingList,
     OpenForm,
@@ -45,7 +42,9 @@ from schurbench.panels.side import (
 )
 from schurbench.panels.style import FIGURE_HEIGHT, SIDE_WIDTH, STYLE, TRACK_HEIGHT
 from schurbench.panels.text import duration
+from schurbench.policy import DEFLATION_TESTS, STRATEGIES
 from schurbench.prepare.plain import number, plural
+from schurbench.prepare.preparation import BALANCE_CHOICES
 
 __all__ = ["Workbench"]
 
@@ -115,9 +114,9 @@ class Workbench(w.VBox):
     row = t.Int(None, allow_none=True)
     strategy = t.Enum(STRATEGIES, "auto")
     form = t.Enum(FORMS, "auto")
-    balance = t.Enum(BALANCES, "permute")
+    balance = t.Enum(BALANCE_CHOICES, "permute")
     flip = t.Bool(False)
-    deflation = t.Enum(TESTS, "ahues-tisseur")
+    deflation = t.Enum(tuple(DEFLATION_TESTS), "ahues-tisseur")
     tol = t.Float(None, allow_none=True)
     exceptional = t.Int(None, allow_none=True, min=0)
     limit = t.Int(None, allow_none=True, min=1)

@@ -151,7 +151,8 @@ def _setting_options(several: bool = False) -> _OneLineParser:
     group.add_argument(
         "--strategy",
         metavar="NAME",
-        help="zero, rayleigh, wilkinson, francis, given or auto" + ("; several with commas between" if several else ""),
+        help="zero, rayleigh, wilkinson, francis, multishift, given or auto"
+        + ("; several with commas between" if several else ""),
     )
     group.add_argument(
         "--shifts",

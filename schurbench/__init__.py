@@ -1,8 +1,8 @@
 """Schur decompositions that can be watched, explained, compared and handed on.
 
 One matrix walks through the rooms of this package in order, and each room imports only the ones before it (the iteration and its
-journal share a place). Below them all lie `schurbench.errors`, `schurbench.measures`, where the limit of a certificate is named, and
-`schurbench.matching`, which pairs spectra.
+journal share a place). Below them all lie `schurbench.errors`, `schurbench.measures`, where the limit of a certificate is named,
+and `schurbench.matching`, which pairs spectra.
 
 1. `schurbench.intake` reads files and arrays into a `WorkingMatrix` and knows the demonstration plant.
 2. `schurbench.prepare` says what kind of matrix it is (`profile`) and brings it to Hessenberg form.

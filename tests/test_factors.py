@@ -16,7 +16,7 @@ from hypothesis.extra import numpy as hnp
 
 import schurbench as sb
 from schurbench.factors.certificate import certify
-from schurbench.factors.conditioning import condition_numbers, separations
+from schurbench.factors.conditioning import condition_numbers, distances_to_spectrum_at, separations
 from schurbench.factors.reorder import bring_to_top
 from schurbench.factors.triangular import eigenvalues_of, is_exact, restore_underflowed_blocks, solve_small_blocks
 from schurbench.matching import pair_spectra
@@ -534,8 +534,53 @@ def test_refused_swaps_reach_the_user(monkeypatch: pytest.MonkeyPatch) -> None:
 def test_eigenvalues_on_the_boundary_are_pointed_out(data: Path) -> None:
     # A gyroscopic system: every eigenvalue is purely imaginary (Wei and Kao 2000), so no side is determined.
     factors = sb.iterate(data / "gyro_wiresaw50.npz").factors().reorder("left-half-plane")
-    assert any("closer to the imaginary axis than one unit of rounding" in note for note in factors.notes)
+    assert any("can put 50 eigenvalues onto the imaginary axis" in note for note in factors.notes)
     assert any("licensed" in note for note in factors.notes)
+
+
+def grcar(n: int) -> np.ndarray:
+    """Grcar's Toeplitz matrix, a standard example of pseudospectra far from the spectrum (Trefethen & Embree 2005)."""
+    return np.triu(np.tril(np.ones((n, n)), 3)) - np.diag(np.ones(n - 1), -1)
+
+
+@pytest.mark.parametrize("form", ["real", "complex"])
+def test_distances_are_smallest_singular_values(form: str) -> None:
+    # Against LAPACK's gesdd on the matrix itself.
+    a = grcar(40)
+    t = sb.iterate(a, form=form).factors().T
+    points = np.array([0.0, 1j, 0.5 + 2j, -1.0, 3.0 + 0.1j])
+    expected = [scipy.linalg.svdvals(a - z * np.eye(40))[-1] for z in points]
+    np.testing.assert_allclose(distances_to_spectrum_at(points, t, form), expected, rtol=0.1)
+
+
+def test_a_cluster_far_from_the_axis_does_not_alarm() -> None:
+    # To first order rounding moves the members of the canal's clusters over the axis; in truth it cannot bring any
+    # eigenvalue near it, as LAPACK's singular values along the axis show.
+    a = sb.demo_matrix().array
+    factors = sb.iterate(a).factors()
+    assert (np.abs(factors.eigenvalues.real) < factors.certificate().rounding_movement).sum() > 20
+    frequencies = np.unique(np.r_[np.abs(factors.eigenvalues.imag), np.linspace(0.0, 70.0, 71)])
+    nearest = min(scipy.linalg.svdvals(a - 1j * w * np.eye(a.shape[0]))[-1] for w in frequencies)
+    assert nearest > 1e4 * ULP * np.linalg.norm(a)
+    assert "not determined" not in factors.trust
+    assert "beyond 4.5·10¹⁵" in factors.trust
+    assert not any("determined" in note for note in factors.reorder("left-half-plane").notes)
+
+
+def test_a_defective_eigenvalue_on_the_axis_does() -> None:
+    jordan = np.diag(np.full(3, 1.0), 1)
+    q = scipy.linalg.qr(np.random.default_rng(1).standard_normal((4, 4)))[0]
+    assert "can put 4 eigenvalues onto the imaginary axis" in sb.iterate(q @ jordan @ q.T).factors().trust
+
+
+@pytest.mark.parametrize("factor", [1e-305, 1e-300, 1e300])
+def test_extreme_factors_can_be_reordered(factor: float) -> None:
+    a = np.random.default_rng(5).standard_normal((8, 8))
+    factors = sb.iterate(factor * a).factors().reorder("left-half-plane")
+    assert factors.certificate().passed
+    left = (factors.eigenvalues.real < 0.0).tolist()
+    assert left == sorted(left, reverse=True)
+    assert sum(left) == np.count_nonzero(np.linalg.eigvals(a).real < 0.0)
 
 
 @pytest.mark.parametrize(

@@ -8,13 +8,13 @@ import numpy as np
 import numpy.typing as npt
 import scipy.linalg
 
-from schurbench.errors import InputError, SettingsError
+from schurbench.errors import SettingsError
 from schurbench.factors.core import Factors, ScaledFactors
 from schurbench.factors.triangular import (
     Array,
     eigenvalues_of,
+    in_matrix_units,
     is_exact,
-    restore_underflowed_blocks,
     solve_small_blocks,
 )
 from schurbench.intake import WorkingMatrix
@@ -62,7 +62,7 @@ def assemble(run: Run) -> Factors:
     form = run.settings.form
     t, z = np.triu(state.H, -1), np.array(state.Z, order="C")
     solved = solve_small_blocks(t, z, form)
-    t = _in_matrix_units(t, z, state.exponent, form)
+    t = in_matrix_units(t, z, state.exponent, form)
     if (state.D == 1.0).all():
         left = f"{plural(solved, '2×2 block')} left by the stopped run solved directly."
         notes = (left,) if solved and not run.converged else ()
@@ -70,20 +70,6 @@ def assemble(run: Run) -> Factors:
     scaled = _scaled_pair(state.D, t, z, form)
     t, z, note = _of_the_loaded_matrix(run, scaled)
     return Factors(t, z, form, run.matrix, run.settings, run.environment, scaled, notes=(note,))
-
-
-def _in_matrix_units(t: Array, z: Array, exponent: int, form: str) -> Array:
-    """2^−exponent · T; Z follows in place should a tiny 2×2 block have to be repaired."""
-    if exponent == 0:
-        return t
-    half = -exponent // 2  # in two factors, because 2^exponent itself may overflow
-    with np.errstate(over="ignore", invalid="ignore"):
-        t = (t * 2.0**half) * 2.0 ** (-exponent - half)
-    if not np.isfinite(t).all():
-        raise InputError("T exceeds the range of double precision; divide the matrix by a power of two first")
-    if form == "real":
-        restore_underflowed_blocks(t, z)
-    return t
 
 
 def _scaled_pair(d: npt.NDArray[np.float64], t: Array, z: Array, form: str) -> ScaledFactors:
@@ -113,7 +99,7 @@ def _of_the_loaded_matrix(run: Run, scaled: ScaledFactors) -> tuple[Array, Array
         assert begun.Z is not None  # asked for in the line above
         t, z = np.array(begun.H), z @ begun.Z
         solve_small_blocks(t, z, form)
-        t = _in_matrix_units(t, z, begun.exponent, form)
+        t = in_matrix_units(t, z, begun.exponent, form)
         return t, z, "The run was scaled and stopped early; T is finished only where that carries over."
     from schurbench.iteration import iterate
 
@@ -124,7 +110,7 @@ def _of_the_loaded_matrix(run: Run, scaled: ScaledFactors) -> tuple[Array, Array
     with single_blas_thread():
         t, z = np.triu(state.H, -1), z @ state.Z
     solve_small_blocks(t, z, form)
-    t = _in_matrix_units(t, z, state.exponent, form)
+    t = in_matrix_units(t, z, state.exponent, form)
     further = plural(rest.sweeps, "further sweep")
     return t, z, f"The run was scaled; {further} ({strategy}) finished the factors of the loaded matrix from there."
 

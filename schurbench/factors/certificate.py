@@ -12,9 +12,10 @@ import numpy.typing as npt
 from schurbench.factors.conditioning import condition_numbers, separations
 from schurbench.factors.triangular import Array, is_exact, unfinished_windows
 from schurbench.journal.records import Window
-from schurbench.measures import RATIO_LIMIT, ULP, orthogonality_ratio, power_of_two_exponent, residual_ratio
+from schurbench.measures import RATIO_LIMIT, ULP, orthogonality_ratio, residual_ratio
 from schurbench.prepare.plain import number, plain, plural
 from schurbench.prepare.preparation import single_blas_thread
+from schurbench.prepare.structure import scaled
 
 __all__ = ["Certificate", "certify"]
 
@@ -58,13 +59,13 @@ class Certificate:
         ``inf`` where the eigenvalue is multiple and defective to working precision, NaN in unfinished windows. See
         `schurbench.factors.conditioning.condition_numbers` for the definition.
         """
-        t, _ = _to_unit_size(self._t)
+        t, _ = scaled(self._t)
         with single_blas_thread():
             return _protected(condition_numbers(t, self.form))
 
     @cached_property
     def _separation(self) -> tuple[npt.NDArray[np.float64], str]:
-        t, exponent = _to_unit_size(self._t)
+        t, exponent = scaled(self._t)
         with single_blas_thread():
             sep, reason = separations(t, self.form)
         return _protected(np.ldexp(sep, -exponent)), reason
@@ -88,7 +89,7 @@ class Certificate:
 
         Shape (n,). A decision that hangs on less than this distance cannot be read off the eigenvalue.
         """
-        t, exponent = _to_unit_size(self._t)
+        t, exponent = scaled(self._t)
         with np.errstate(over="ignore"):
             return _protected(np.ldexp(ULP * float(np.linalg.norm(t)) * self.condition, -exponent))
 
@@ -150,13 +151,6 @@ def certify(a: Array, t: Array, z: Array, form: str) -> Certificate:
     with single_blas_thread():
         backward_error, orthogonality = residual_ratio(a, z, t), orthogonality_ratio(z)
     return Certificate(backward_error, orthogonality, is_exact(t, form), form, unfinished_windows(t, form), t)
-
-
-def _to_unit_size(t: Array) -> tuple[Array, int]:
-    """2^e·T with entries at most 1, and e, so that scale alone makes nothing over- or underflow."""
-    exponent = power_of_two_exponent(np.ascontiguousarray(t))
-    half = exponent // 2
-    return (t * 2.0**half) * 2.0 ** (exponent - half), exponent
 
 
 def _protected(values: npt.NDArray[np.float64]) -> npt.NDArray[np.float64]:

@@ -13,15 +13,24 @@ import numpy.typing as npt
 
 from schurbench.errors import SettingsError
 from schurbench.factors.certificate import Certificate, certify
-from schurbench.factors.conditioning import condition_numbers
+from schurbench.factors.conditioning import condition_numbers, distances_to_spectrum_at
 from schurbench.factors.reorder import REGIONS, RefusedSwap, Selection, bring_to_top, choose
-from schurbench.factors.triangular import Array, diagonal_blocks, eigenvalues_of, solve_small_blocks, unfinished_windows
+from schurbench.factors.triangular import (
+    Array,
+    diagonal_blocks,
+    eigenvalues_of,
+    in_matrix_units,
+    solve_small_blocks,
+    unfinished_windows,
+)
 from schurbench.intake import WorkingMatrix
 from schurbench.journal.records import Settings, Window
 from schurbench.matching import pair_spectra
 from schurbench.measures import ULP
 from schurbench.prepare.plain import number, plain, plural
 from schurbench.prepare.preparation import single_blas_thread
+from schurbench.prepare.structure import scaled as scaled_to_one
+from schurbench.prepare.structure import times_power_of_two
 
 __all__ = ["Factors", "ScaledFactors"]
 
@@ -49,6 +58,10 @@ class ScaledFactors:
     T: Array
     Z: Array
     eigenvalues: npt.NDArray[np.complex128]
+
+
+#: Eigenvalues within so many of their first-order movements of a boundary are looked at more closely.
+_CANDIDATE = 10.0
 
 
 # Not slotted: the certificate and the advice are worked out when first asked for and kept in the instance.
@@ -155,7 +168,7 @@ class Factors:
         Unfinished factors are refused: an eigenvalue that has not been found cannot be placed on either side.
         """
         if not self.complete:
-            rows = ", ".join(f"{lo} to {hi}" for lo, hi in self.unfinished)
+            rows = ", ".join(f"{lo} to {hi - 1}" for lo, hi in self.unfinished)
             raise SettingsError(
                 f"only finished factors can be reordered, and T is still Hessenberg in rows {rows}; "
                 "raise the limit or change the strategy until the run converges"
@@ -170,9 +183,11 @@ class Factors:
             notes.append(f"{plural(completed, 'complex pair')} chosen by one member only moved as a whole.")
         if isinstance(selection, str):
             notes.extend(_near_boundary(self, selection))
+        t, exponent = scaled_to_one(self.T)  # LAPACK's exchanges lose accuracy near the smallest doubles
         with single_blas_thread():
-            t, z, refused = bring_to_top(self.T, self.Z, chosen)
+            t, z, refused = bring_to_top(t, self.Z, chosen)
             solve_small_blocks(t, z, self.form)
+        t = in_matrix_units(t, z, exponent, self.form)
         if refused:
             notes.append(
                 f"{plural(len(refused), 'swap')} of nearly equal eigenvalues refused by LAPACK: not every chosen "
@@ -225,15 +240,35 @@ class Factors:
 
 
 def _near_boundary(factors: Factors, region: str) -> list[str]:
-    """A sentence when eigenvalues lie closer to the boundary than one unit of rounding moves them."""
-    _, distance, boundary = REGIONS[region]
-    near = int(np.count_nonzero(distance(factors.eigenvalues) <= factors.certificate().rounding_movement))
+    """A sentence when rounding can put eigenvalues on the boundary of a region."""
+    near = _undecided(factors, region)
     if not near:
         return []
     return [
-        f"{plural(near, 'eigenvalue lies', 'eigenvalues lie')} closer to {boundary} than one unit of rounding moves "
-        f"{'it' if near == 1 else 'them'}: the side is not determined. {CAUTION}"
+        f"One unit of rounding in A can put {plural(near, 'eigenvalue')} onto {REGIONS[region][2]}: the side is not "
+        f"determined. {CAUTION}"
     ]
+
+
+def _undecided(factors: Factors, region: str) -> int:
+    """How many eigenvalues one unit of rounding in A can put on the boundary of a region.
+
+    Condition numbers only propose candidates: to first order they let the members of a cluster move much further than
+    they can. What decides is the smallest perturbation that puts an eigenvalue on the nearest point of the boundary.
+    """
+    boundary = REGIONS[region][1](factors.eigenvalues)
+    distance = np.abs(factors.eigenvalues - boundary)
+    near = np.flatnonzero(distance <= _CANDIDATE * factors.certificate().rounding_movement)
+    if not near.size:
+        return 0
+    points = boundary[near]
+    if factors.form == "real":
+        points = points.real + 1j * np.abs(points.imag)  # both members of a pair are as far
+    points, member = np.unique(points, return_inverse=True)
+    t, exponent = scaled_to_one(factors.T)
+    with single_blas_thread():
+        reach = distances_to_spectrum_at(times_power_of_two(points, exponent), t, factors.form)
+    return int(np.count_nonzero(reach[member] <= ULP * float(np.linalg.norm(t))))
 
 
 def _trust(factors: Factors) -> str:
@@ -252,28 +287,28 @@ def _trust(factors: Factors) -> str:
             f"{plural(missing, 'eigenvalue is', 'eigenvalues are')} not found yet; the other {int(found.sum())} are as "
             "good as in a finished run."
         )
-    worst = int(np.argmax(np.where(found, condition, -1.0)))
-    if np.isinf(condition[worst]):
-        many = int(np.count_nonzero(np.isinf(condition)))
+    measured = found & (condition < 1.0 / ULP)
+    beyond = int(np.count_nonzero(found & ~measured))
+    if beyond:
         sentences.append(
-            f"{plural(many, 'eigenvalue has', 'eigenvalues have')} no finite condition number: multiple and defective "
-            "to working precision. Trust the mean of such a cluster rather than its members."
+            f"{plural(beyond, 'eigenvalue has a condition number', 'eigenvalues have condition numbers')} beyond "
+            f"{number(1.0 / ULP)}, the inverse of rounding, as multiple and defective ones have. Trust the mean of such "
+            "a cluster rather than its members."
         )
-    else:
-        hopeless = ULP * condition[worst] >= 1.0
-        beyond = ", more than the norm of A, so no digit of it is determined" if hopeless else ""
+    if measured.any():
+        worst = int(np.argmax(np.where(measured, condition, -1.0)))
         sentences.append(
-            f"The worst-conditioned eigenvalue, {_complex(factors.eigenvalues[worst])}, has condition number "
-            f"{number(condition[worst])}: one unit of rounding in A moves it by about "
-            f"{number(movement[worst])}{beyond}."
+            f"The worst-conditioned eigenvalue{' of the others' if beyond else ''}, "
+            f"{_complex(factors.eigenvalues[worst])}, has condition number {number(condition[worst])}: to first order, "
+            f"one unit of rounding in A moves it by about {number(movement[worst])}."
         )
     if factors.scaled is not None:
         sentences.append(_which_pair(factors, factors.scaled))
-    undecided = int(np.count_nonzero(np.abs(factors.eigenvalues.real) <= movement))
+    undecided = _undecided(factors, "left-half-plane")
     if undecided:
         sentences.append(
-            f"{plural(undecided, 'eigenvalue lies', 'eigenvalues lie')} closer to the imaginary axis than one unit of "
-            f"rounding moves {'it' if undecided == 1 else 'them'}, so the sign of the real part is not determined."
+            f"One unit of rounding in A can put {plural(undecided, 'eigenvalue')} onto the imaginary axis, so the sign "
+            f"of {'its' if undecided == 1 else 'their'} real part is not determined."
         )
     return " ".join([*sentences, CAUTION])
 

@@ -28,18 +28,19 @@ def _unit_disc(values: Complex) -> Flags:
     return np.asarray(np.abs(values) < 1.0)
 
 
-def _from_imaginary_axis(values: Complex) -> npt.NDArray[np.float64]:
-    return np.abs(values.real)
+def _onto_imaginary_axis(values: Complex) -> Complex:
+    return np.asarray(values.imag * 1j, dtype=np.complex128)
 
 
-def _from_unit_circle(values: Complex) -> npt.NDArray[np.float64]:
-    return np.abs(np.abs(values) - 1.0)
+def _onto_unit_circle(values: Complex) -> Complex:
+    size = np.abs(values)
+    return np.asarray(np.where(size > 0.0, values, 1.0) / np.where(size > 0.0, size, 1.0), dtype=np.complex128)
 
 
-#: Name of a region: which eigenvalues lie in it, how far each is from its boundary, what the boundary is called.
-REGIONS: dict[str, tuple[Callable[[Complex], Flags], Callable[[Complex], npt.NDArray[np.float64]], str]] = {
-    "left-half-plane": (_left_half_plane, _from_imaginary_axis, "the imaginary axis"),
-    "unit-disc": (_unit_disc, _from_unit_circle, "the unit circle"),
+#: Name of a region: which eigenvalues lie in it, the nearest point of its boundary, what the boundary is called.
+REGIONS: dict[str, tuple[Callable[[Complex], Flags], Callable[[Complex], Complex], str]] = {
+    "left-half-plane": (_left_half_plane, _onto_imaginary_axis, "the imaginary axis"),
+    "unit-disc": (_unit_disc, _onto_unit_circle, "the unit circle"),
 }
 
 

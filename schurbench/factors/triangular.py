@@ -9,12 +9,15 @@ import numpy as np
 import numpy.typing as npt
 import scipy.linalg
 
+from schurbench.errors import InputError
 from schurbench.journal.records import Window
+from schurbench.prepare.structure import times_power_of_two
 
 __all__ = [
     "Array",
     "diagonal_blocks",
     "eigenvalues_of",
+    "in_matrix_units",
     "is_exact",
     "restore_underflowed_blocks",
     "solve_small_blocks",
@@ -100,6 +103,25 @@ def solve_small_blocks(t: Array, z: Array, form: str) -> int:
         z[:, rows] = z[:, rows] @ u
         solved += 1
     return solved
+
+
+def in_matrix_units(t: Array, z: Array, exponent: int, form: str) -> Array:
+    """2^−exponent · T; Z follows in place should a tiny 2×2 block have to be repaired.
+
+    Raises
+    ------
+    InputError
+        T exceeds the range of double precision in these units.
+    """
+    if exponent == 0:
+        return t
+    with np.errstate(over="ignore", invalid="ignore"):
+        t = times_power_of_two(t, -exponent)
+    if not np.isfinite(t).all():
+        raise InputError("T exceeds the range of double precision; divide the matrix by a power of two first")
+    if form == "real":
+        restore_underflowed_blocks(t, z)
+    return t
 
 
 def restore_underflowed_blocks(t: Array, z: Array) -> None:

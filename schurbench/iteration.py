@@ -314,7 +314,8 @@ class Iteration:
         self._window = (lo, hi) if hi > lo else (0, lo)
         self._view.found = (window[1] - hi) / rows
         self._view.handed_on = outcome.handed_on
-        return outcome.spikes
+        spikes: tuple[float, ...] = outcome.spikes
+        return spikes
 
     def _propose(self) -> tuple[tuple[complex, ...], bool]:
         view = self._view

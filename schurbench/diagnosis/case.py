@@ -63,17 +63,20 @@ class Stretch:
         Active window, half-open.
     end : Deflation or None
         What ended it; None when the run stopped first.
+    looks : int
+        Steps among them that looked into a deflation window instead of sweeping.
     """
 
     first: int
     last: int
     window: tuple[int, int]
     end: Deflation | None
+    looks: int = 0
 
     @property
     def length(self) -> int:
         """Sweeps."""
-        return self.last - self.first + 1
+        return self.last - self.first + 1 - self.looks
 
     @property
     def rows(self) -> int:
@@ -155,19 +158,30 @@ class Case:
         """Every stretch of sweeps between two deflations, in order."""
         found: list[Stretch] = []
         first: int | None = None
+        looks = 0
         for step in self.run.steps:
-            if not step.shifts:
-                continue
             if first is None:
-                first = step.index
+                if not step.shifts:
+                    continue
+                first, looks = step.index, 0
+            looks += not step.shifts
             after = [d for d in step.deflations if not d.before_sweep]
             if after:
-                found.append(Stretch(first, step.index, step.window, after[0]))
+                found.append(Stretch(first, step.index, step.window, after[0], looks))
                 first = None
         if first is not None:
             last = self.run.steps[-1]
-            found.append(Stretch(first, last.index, last.window, None))
+            found.append(Stretch(first, last.index, last.window, None, looks))
         return tuple(found)
+
+    @cached_property
+    def _sweep_numbers(self) -> npt.NDArray[np.int64]:
+        """Sweeps done up to and including each step, shape (steps,)."""
+        return np.cumsum([bool(step.shifts) for step in self.run.steps], dtype=np.int64)
+
+    def sweep_numbers(self, stretch: Stretch) -> npt.NDArray[np.int64]:
+        """Number of the sweep of each of the sampled steps."""
+        return self._sweep_numbers[self.sampled_steps(stretch) - 1]
 
     @cached_property
     def longest_wait(self) -> int:
@@ -265,7 +279,10 @@ class Case:
     @cached_property
     def movements(self) -> Real | None:
         """The distance by which rounding, ulp·‖H‖, moves each eigenvalue to first order, in working units."""
-        return None if self.conditions is None else ULP * self.run.norm * self.conditions
+        if self.conditions is None:
+            return None
+        with np.errstate(over="ignore"):  # a condition number without bound may exceed the range, and so may this
+            return ULP * self.run.norm * self.conditions
 
     @cached_property
     def clusters(self) -> tuple[Cluster, ...]:
@@ -310,13 +327,14 @@ class Case:
         return not bool(np.isnan(self.eigenvalues[lo:hi]).any())
 
     def sampled_steps(self, stretch: Stretch) -> npt.NDArray[np.int64]:
-        """Steps of the later part of a stretch, at most 160, evenly spaced; transients at its start are left out."""
-        first = stretch.first + stretch.length // 4
+        """Sweeps of the later part of a stretch, at most 160, evenly spaced; transients at its start are left out."""
+        first = stretch.first + (stretch.last - stretch.first + 1) // 4
         last = stretch.last if stretch.end is None else max(stretch.last - 1, first)
         if not self._replay_is_cheap:
             last = min(last, self.run.journal.held - 1)
         count = max(0, min(_SAMPLES, last - first + 1))
-        return np.unique(np.linspace(first, last, count).astype(np.int64))
+        chosen = np.unique(np.linspace(first, last, count).astype(np.int64))
+        return chosen[[bool(self.run.steps[int(k) - 1].shifts) for k in chosen]] if chosen.size else chosen
 
     @cached_property
     def _replay_is_cheap(self) -> bool:
@@ -382,7 +400,8 @@ class Case:
         if not magnitudes.all():
             return None
         level = np.log(magnitudes)
-        x = steps - steps.mean()
+        numbers = self.sweep_numbers(stretch)
+        x = numbers - numbers.mean()
         y = level - level.mean()
         slope = float(x @ y) / float(x @ x)
         variation = float(y @ y)

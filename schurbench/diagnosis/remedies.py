@@ -9,7 +9,7 @@ import numpy as np
 
 from schurbench.diagnosis.finding import Finding, RemedyResult, SettingsRemedy, SolverRemedy, ratio_text
 from schurbench.measures import residual_ratio
-from schurbench.policy import EXCEPTIONAL_PERIOD, STRATEGIES
+from schurbench.policy import EXCEPTIONAL_PERIOD, STRATEGIES, Multishift, strategy_for
 from schurbench.prepare.plain import number, plural
 
 if TYPE_CHECKING:
@@ -37,13 +37,14 @@ def change(case: Case, text: str, **changes: Any) -> SettingsRemedy:
     keywords: dict[str, Any] = {}
     if before.strategy in STRATEGIES:
         keywords["strategy"] = before.strategy
-        automatic = {"real": "francis", "complex": "wilkinson"}[before.form]
+        automatic = strategy_for("auto", n=case.run.n, real=before.form == "real")
         if before.strategy == "given":
             keywords["shifts"] = [complex(*pair) if pair[1] else pair[0] for pair in before.options["shifts"]]
         pure = before.strategy in ("zero", "given")
-        if before.exceptional != (0 if pure else EXCEPTIONAL_PERIOD):
+        usual_period = Multishift.patience if before.strategy == Multishift.name else EXCEPTIONAL_PERIOD
+        if before.exceptional != (0 if pure else usual_period):
             keywords["exceptional"] = before.exceptional
-        if before.strategy == automatic and "strategy" not in changes:
+        if before.strategy == getattr(automatic, "name", "") and "strategy" not in changes:
             keywords["strategy"] = "auto"
     if case.run.matrix.is_real and before.form == "complex":
         keywords["form"] = "complex"

@@ -41,7 +41,7 @@ class Multishift:
 
     def deflation_window(self, view: WindowView) -> int:
         """Rows of the deflation window to look into now; 0 to sweep instead."""
-        rows = view.window[1] - view.window[0]
+        rows: int = view.window[1] - view.window[0]
         if rows < _SMALLEST or (view.found is not None and view.found < _SHARE):
             return 0
         wide = 2 if view.waited >= _WIDEN_AFTER else 1

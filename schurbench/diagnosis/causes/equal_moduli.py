@@ -33,16 +33,19 @@ class EqualModuli:
         if hi - lo < 2 or not case.known(stretch):
             return None
         gains = case.gains(stretch)
-        spread = float(np.expm1(gains.max() - gains.min()))
+        with np.errstate(over="ignore"):  # an eigenvalue that is a shift
+            spread = float(np.expm1(gains.max() - gains.min()))
         shifts = case.shifts(stretch)
-        movement = float(np.nanmax(np.abs(shifts - shifts[-1]))) / (case.run.norm or 1.0)
+        moved = np.abs(shifts - shifts[-1])
+        moved = moved[np.isfinite(moved)]  # sweeps may differ in their number of shifts
+        movement = float(moved.max(initial=0.0)) / (case.run.norm or 1.0)
         if spread > _SPREAD or movement > _SHIFT_MOVEMENT:
             return None
         level = np.abs(case.bands(stretch)[:, 1, lo : hi - 1])
         if not level.all():
             return None
         mean = np.log(level).mean(axis=1)
-        sweeps = max(1, int(np.ptp(case.sampled_steps(stretch))))
+        sweeps = max(1, int(np.ptp(case.sweep_numbers(stretch))))
         measured = float(np.exp((mean[-1] - mean[0]) / sweeps))
         if measured < _STILL:
             return None

@@ -39,7 +39,7 @@ class RealShiftOnPair:
             return None
         centre = (diagonal[-1, hi - 2] + diagonal[-1, hi - 1]) / 2
         pair = complex(centre, float(np.sqrt(max(-disc[-1], 0.0))))
-        sweeps = max(1, int(np.ptp(case.sampled_steps(stretch))))
+        sweeps = max(1, int(np.ptp(case.sweep_numbers(stretch))))
         to_pair, to_conjugate = abs(pair - shifts[-1, 0]), abs(pair.conjugate() - shifts[-1, 0])
         evidence = {
             "sweeps_without_deflation": float(stretch.length),

@@ -21,6 +21,10 @@ _STRAIGHT = 0.9
 _DISAGREEMENT = 0.35
 
 
+#: Share of the rounding level of the norm under which an entry is far below it.
+_FAR_BELOW = 1e-4
+
+
 class SlowRatio:
     """log|h| on a straight line whose slope is that of |p(λᵢ₊₁)/p(λᵢ)|, close to 1."""
 
@@ -32,7 +36,11 @@ class SlowRatio:
         if decay is None or decay.straightness < _STRAIGHT or not 0.0 < decay.measured < 1.0:
             return None
         disagreement = _disagreement(decay)
-        if disagreement > _DISAGREEMENT:
+        level = case.run.settings.tol or ULP * case.run.norm
+        to_go = math.log(decay.magnitude / level) / -math.log(decay.measured)
+        below = math.floor(-to_go) if case.run.settings.tol is None else 0
+        kept = 2 * below >= stretch.length and decay.magnitude < _FAR_BELOW * level
+        if disagreement > _DISAGREEMENT or (decay.measured < _steepest(case) and not kept):
             return None
         evidence = {
             "sweeps_without_deflation": float(stretch.length),
@@ -42,12 +50,11 @@ class SlowRatio:
             "straightness": decay.straightness,
             "magnitude_at_end": float(case.run.to_matrix_units(decay.magnitude)),
         }
-        if stretch.end is None:
-            level = case.run.settings.tol or ULP * case.run.norm
-            if decay.magnitude > level:
-                evidence["sweeps_still_needed"] = float(
-                    math.ceil(math.log(decay.magnitude / level) / -math.log(decay.measured))
-                )
+        if stretch.end is None and to_go > 0.0:
+            evidence["sweeps_still_needed"] = float(math.ceil(to_go))
+        if kept:
+            evidence["rounding_level_of_norm"] = float(case.run.to_matrix_units(level))
+            evidence["sweeps_below_it"] = float(below)
         return Judgement(
             stretch,
             (decay.row, stretch.window[1]),
@@ -67,6 +74,12 @@ class SlowRatio:
         )
         if "sweeps_still_needed" in e:
             statement += f"; at this rate it needs about {number(e['sweeps_still_needed'])} more sweeps"
+        if "sweeps_below_it" in e:
+            statement += (
+                f"; for about {number(e['sweeps_below_it'])} of them it lay below rounding of the norm "
+                f"({number(e['rounding_level_of_norm'])}), and the deflation test {case.run.settings.deflation!r} kept "
+                "it because the diagonal entries beside it are small"
+            )
         return Finding(
             cause=self.code,
             statement=statement + case.carriers(worst.rows) + "." + more_stretches(judgements),
@@ -74,8 +87,13 @@ class SlowRatio:
             rows=all_rows(judgements),
             steps=sweeps_of(judgements),
             confidence=worst.confidence,
-            remedy=_remedy(case),
+            remedy=_remedy(case, kept="sweeps_below_it" in e),
         )
+
+
+def _steepest(case: Case) -> float:
+    """Decay a sweep that brings an entry from the norm to rounding within a healthy wait: anything steeper is not slow."""
+    return float(ULP ** (1.0 / case.healthy.longest_wait))
 
 
 def _disagreement(decay: Decay) -> float:
@@ -85,9 +103,16 @@ def _disagreement(decay: Decay) -> float:
     return abs(measured - predicted) / steeper if steeper > 0.0 else 0.0
 
 
-def _remedy(case: Case) -> SettingsRemedy:
+def _remedy(case: Case, kept: bool = False) -> SettingsRemedy:
     settings = case.run.settings
     adaptive = "francis" if settings.form == "real" else "wilkinson"
+    if kept and settings.strategy == adaptive and settings.deflation == "ahues-tisseur":
+        return change(
+            case,
+            "Judge an entry by its neighbours alone (deflation test 'neighbour'); where the small diagonal entries matter, "
+            "compare the small eigenvalues of both runs.",
+            deflation="neighbour",
+        )
     if settings.strategy != adaptive:
         return change(
             case,

@@ -20,7 +20,6 @@ _STRAIGHT = 0.9
 #: Largest disagreement of the two slopes, as a share of the steeper one.
 _DISAGREEMENT = 0.35
 
-
 #: Share of the rounding level of the norm under which an entry is far below it.
 _FAR_BELOW = 1e-4
 

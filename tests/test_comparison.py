@@ -275,6 +275,31 @@ def test_survey_writes_csv_and_leaves_existing_files_alone(tmp_path: Path) -> No
         sb.survey([np.eye(2)], out=tmp_path / "rows.xlsx")
 
 
+def test_survey_leaves_out_what_it_did_not_come_for(tmp_path: Path) -> None:
+    np.save(tmp_path / "plant.npy", np.diag([1.0, 2.0]))
+    run = sb.iterate(tmp_path / "plant.npy")
+    run.save(tmp_path / "plant_run.npz")
+    for suffix in (".mat", ".mtx"):
+        run.factors().save(tmp_path / f"plant_schur{suffix}")
+    (tmp_path / "rows.csv").write_text("of last week")
+    result = sb.survey(tmp_path, out=tmp_path / "rows.csv", replace=True)
+    assert [row.name for row in result.rows] == ["plant"]
+    assert result.left_out == (
+        "plant_run.npz",
+        "plant_schur.mat",
+        "plant_schur_T.mtx",
+        "plant_schur_Z.mtx",
+        "rows.csv",
+    )
+    assert "Left out as results of earlier work: plant_run.npz" in result.sentence
+    assert [row.name for row in sb.survey(tmp_path / "plant_schur.mat").rows] == [
+        "plant_schur.mat: T",
+        "plant_schur.mat: Z",
+    ]
+    with pytest.raises(sb.InputError, match="no matrix to survey but results of earlier work"):
+        sb.survey(str(tmp_path / "*_T.mtx"))
+
+
 def test_senseless_surveys_are_refused(tmp_path: Path) -> None:
     with pytest.raises(sb.InputError, match="no matrix to survey"):
         sb.survey(tmp_path)

@@ -7,7 +7,6 @@ import glob
 import io
 import json
 import os
-import tempfile
 import threading
 from collections.abc import Callable, Iterable, Iterator, Sized
 from dataclasses import asdict, dataclass
@@ -20,13 +19,16 @@ from schurbench.comparison.compare import Figures, figures_of, need_pandas
 from schurbench.errors import InputError, SchurbenchError
 from schurbench.intake import load
 from schurbench.iteration import iterate
-from schurbench.journal import Run
+from schurbench.journal import Run, is_run
 from schurbench.prepare.plain import plain, plural
 
 __all__ = ["Survey", "SurveyRow", "survey"]
 
 _READABLE = (".npy", ".npz", ".mtx", ".mtx.gz", ".mat", ".csv", ".tsv", ".txt")
 _OUTPUTS = (".csv", ".json")
+
+#: What stands beside saved factors (`schurbench.factors`, a later room, writes it).
+_MANIFEST = ".manifest.json"
 
 
 @dataclass(frozen=True, slots=True)
@@ -79,9 +81,13 @@ class Survey:
     Attributes
     ----------
     rows : tuple of SurveyRow
+    left_out : tuple of str
+        Files of a folder or pattern that this package wrote itself: saved runs, factors with a manifest, the table
+        that is being replaced.
     """
 
     rows: tuple[SurveyRow, ...]
+    left_out: tuple[str, ...] = ()
 
     @property
     def failures(self) -> tuple[SurveyRow, ...]:
@@ -93,9 +99,10 @@ class Survey:
         """The outcome in words."""
         converged = sum(1 for row in self.rows if row.figures is not None and row.figures.converged)
         passed = sum(1 for row in self.rows if row.figures is not None and row.figures.passed)
+        own = f" Left out as results of earlier work: {', '.join(self.left_out)}." if self.left_out else ""
         return (
             f"{plural(len(self.rows), 'matrix', 'matrices')}: {converged} converged, {passed} with factors that pass, "
-            f"{len(self.failures)} failed."
+            f"{len(self.failures)} failed.{own}"
         )
 
     def table(self) -> Any:
@@ -110,7 +117,11 @@ class Survey:
 
     def to_dict(self) -> dict[str, Any]:
         """JSON-ready."""
-        return {"sentence": self.sentence, "rows": [row.to_dict() for row in self.rows]}
+        return {
+            "sentence": self.sentence,
+            "rows": [row.to_dict() for row in self.rows],
+            "left_out": list(self.left_out),
+        }
 
     def save(self, path: str | Path, replace: bool = False) -> Path:
         """Write the rows as ``.csv`` or ``.json``; the file is either whole or not there.
@@ -130,13 +141,15 @@ class Survey:
             writer.writeheader()
             writer.writerows(row.to_dict() for row in self.rows)
             text = buffer.getvalue()
-        handle, fresh = tempfile.mkstemp(prefix=".saving-", dir=path.parent)
+        fresh = path.with_name(f".saving-{os.getpid()}-{path.name}")
         try:
-            with os.fdopen(handle, "w", encoding="utf-8", newline="") as stream:
+            with fresh.open("x", encoding="utf-8", newline="") as stream:
                 stream.write(text)
-            Path(fresh).replace(path)
+            fresh.replace(path)
+        except FileExistsError:
+            raise InputError(f"{fresh} is in the way; remove it, an earlier survey left it behind") from None
         except BaseException:
-            Path(fresh).unlink(missing_ok=True)
+            fresh.unlink(missing_ok=True)
             raise
         return path
 
@@ -155,7 +168,8 @@ def survey(
     ----------
     source : path, pattern or iterable
         A folder (every file of a readable kind in it, by name), a pattern such as ``"models/*.mtx"``, a ``.npz`` or
-        ``.mat`` file with several square arrays, or an iterable of what `schurbench.load` accepts.
+        ``.mat`` file with several square arrays, or an iterable of what `schurbench.load` accepts. Saved runs and
+        factors found in a folder or by a pattern are left out.
     out : path, optional
         ``.csv`` or ``.json`` to write the rows to.
     replace : bool
@@ -178,7 +192,7 @@ def survey(
     """
     if out is not None:
         _check_output(Path(out), replace)
-    items, count = _items(source)
+    items, count, left_out = _items(source, None if out is None else Path(out))
     rows: list[SurveyRow] = []
     for place, (name, origin, key) in enumerate(items):
         if cancel is not None and cancel.is_set():
@@ -186,7 +200,7 @@ def survey(
         if progress is not None:
             progress(name, place, count)
         rows.append(_row(name, origin, key, cancel, settings))
-    result = Survey(tuple(rows))
+    result = Survey(tuple(rows), left_out)
     if out is not None:
         result.save(out, replace=replace)
     return result
@@ -230,17 +244,20 @@ def _first_finding(run: Run) -> tuple[str, str]:
 Item = tuple[str, Any, str | None]
 
 
-def _items(source: Any) -> tuple[Iterator[Item], int]:
-    """What to load, each with a name and perhaps a key; and how many, 0 when that is not known."""
+def _items(source: Any, out: Path | None) -> tuple[Iterator[Item], int, tuple[str, ...]]:
+    """What to load, each with a name and perhaps a key; how many, 0 when that is not known; and what is left out."""
     if isinstance(source, str | os.PathLike):
-        found = _from_path(Path(source))
+        found, left_out = _from_path(Path(source), out)
         if not found:
-            raise InputError(f"{source} has no matrix to survey; give a folder, a pattern or an iterable of matrices")
-        return iter(found), len(found)
+            own = f" but results of earlier work ({', '.join(left_out)})" if left_out else ""
+            raise InputError(
+                f"{source} has no matrix to survey{own}; give a folder, a pattern or an iterable of matrices"
+            )
+        return iter(found), len(found), left_out
     if not isinstance(source, Iterable):
         raise InputError(f"a {type(source).__name__} is nothing to survey; give a folder, a pattern or an iterable")
     count = len(source) if isinstance(source, Sized) else 0
-    return ((_name(item, place), item, None) for place, item in enumerate(source)), count
+    return ((_name(item, place), item, None) for place, item in enumerate(source)), count, ()
 
 
 def _name(item: Any, place: int) -> str:
@@ -249,13 +266,24 @@ def _name(item: Any, place: int) -> str:
     return str(getattr(item, "name", f"matrix {place}"))
 
 
-def _from_path(path: Path) -> list[Item]:
+def _from_path(path: Path, out: Path | None) -> tuple[list[Item], tuple[str, ...]]:
+    if path.is_file():
+        return [(f"{path.name}: {key}", path, key) for key in _square_keys(path)] or [(path.name, path, None)], ()
     if path.is_dir():
         files = sorted(file for file in path.iterdir() if file.is_file() and file.name.lower().endswith(_READABLE))
-        return [(file.name, file, None) for file in files]
-    if path.is_file():
-        return [(f"{path.name}: {key}", path, key) for key in _square_keys(path)] or [(path.name, path, None)]
-    return [(Path(file).name, Path(file), None) for file in sorted(glob.glob(str(path)))]  # noqa: PTH207  # absolute patterns too
+    else:
+        files = [Path(file) for file in sorted(glob.glob(str(path)))]  # noqa: PTH207  # absolute patterns too
+    own = [file for file in files if _is_result(file, out)]
+    return [(file.name, file, None) for file in files if file not in own], tuple(file.name for file in own)
+
+
+def _is_result(file: Path, out: Path | None) -> bool:
+    """Whether a file is a saved run, factors beside their manifest, or the table about to be replaced."""
+    if out is not None and out.exists() and file.samefile(out):
+        return True
+    stem = file.name.removesuffix(file.suffix)
+    whole = stem.removesuffix("_T").removesuffix("_Z") + file.suffix  # Matrix Market holds one factor a file
+    return is_run(file) or any((file.parent / (name + _MANIFEST)).exists() for name in (file.name, whole))
 
 
 def _square_keys(path: Path) -> list[str]:

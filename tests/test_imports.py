@@ -25,7 +25,7 @@ PACKAGE = Path(schurbench.__file__).parent
 
 #: The rooms in the order of the walk; rooms that stand in one tuple belong together and may import one another.
 ROOMS = [
-    ("errors", "measures", "matching"),
+    ("errors", "measures", "matching", "saving"),
     ("intake",),
     ("prepare",),
     ("kernels",),

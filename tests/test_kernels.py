@@ -194,7 +194,7 @@ def test_deflation_tests_differ_where_they_should() -> None:
 def test_bands() -> None:
     H = hessenberg(6, complex, seed=2)
     out = np.empty((3, 6), dtype=complex)
-    bands(split(H), out)
+    bands(split(H), 0, 6, out)
     assert np.array_equal(out[0], np.diag(H))
     assert np.array_equal(out[1, :5], np.diag(H, -1))
     assert np.array_equal(out[2, :5], np.diag(H, 1))

@@ -13,9 +13,13 @@ from schurbench.prepare.preparation import single_blas_thread
 
 __all__ = ["Journal", "replay_step"]
 
-# Steps between checkpoints at first. Copying H and Zᴴ costs about as much as two sweeps, so one copy in 64 sweeps adds
-# some 3 % to the run; the spacing doubles whenever the byte budget is used up.
-_FIRST_SPACING = 64
+# Work between checkpoints at first, in sweeps over the whole matrix. Copying H and Zᴴ into fresh memory costs about as much
+# as four sweeps, so that one copy in 128 adds some 3 % to the run; the distance doubles whenever the byte budget is used up.
+# What lies between is filled in when someone goes there.
+_FIRST_DISTANCE = 128
+
+# A deflation window of m rows costs about as much as this many rotations of whole rows for each of its rows.
+_WINDOW_WORK = 4
 
 _CHUNK = 64
 
@@ -40,42 +44,48 @@ class Journal:
         self.keep = keep
         self.steps: list[Step] = []
         self.windows: list[Window] = [window]
-        self.spacing = _FIRST_SPACING
         self.checkpoints: dict[int, tuple[Array, Array]] = {0: (H, Qh)}
+        self._distance = _FIRST_DISTANCE
+        self._work = 0  # rotations since the last checkpoint
         self._state_bytes = H.nbytes + Qh.nbytes
         self._chunks: list[Array] = []
         self._banded = 0  # states whose bands are held: 0 … _banded−1
         self._walk: tuple[int, Array, Array] | None = None  # the last state rebuilt, so that walking forward is cheap
         self._band_bytes = 3 * self.n * self.band_type.itemsize
-        self._keep_bands(H)
+        self._keep_bands(H, None)
 
     def add(self, step: Step, H: Array, Qh: Array, window: Window) -> None:
         """Record one finished step and the state it led to."""
         self.steps.append(step)
         self.windows.append(window)
-        index = step.index
-        if self._banded == index:
-            self._keep_bands(H)
-        if index % self.spacing == 0:
-            self._checkpoint(index, H, Qh)
+        if self._banded == step.index:
+            self._keep_bands(H, step)
+        self._work += step.rotations + _WINDOW_WORK * step.rows
+        if self._work >= self._distance * self.n:
+            self._work = 0
+            while len(self.checkpoints) > 1 and not self._room():
+                self._distance *= 2
+                self.checkpoints = {k: self.checkpoints[k] for k in sorted(self.checkpoints)[::2]}
+            if self._room():
+                self.checkpoints[step.index] = (H.copy(), Qh.copy())
 
-    def _keep_bands(self, H: Array) -> None:
-        slot = self._banded % _CHUNK
+    def _room(self) -> bool:
+        """Whether one more checkpoint fits in the budget."""
+        return (len(self.checkpoints) + 1) * self._state_bytes <= self.keep
+
+    def _keep_bands(self, H: Array, step: Step | None) -> None:
+        chunk, slot = divmod(self._banded, _CHUNK)
         if slot == 0:
             if self._chunks and len(self._chunks) * _CHUNK * self._band_bytes >= self.keep:
                 return  # later bands are rebuilt by replay when someone asks
             self._chunks.append(np.empty((_CHUNK, 3, self.n), dtype=self.band_type))
-        self._copy_bands(H, self._chunks[-1][slot])
+        out = self._chunks[-1][slot]
+        lo, hi = 0, self.n
+        if step is not None and not step.deflations:  # nothing outside the window of the step has changed
+            out[:] = self._chunks[-1][slot - 1] if slot else self._chunks[chunk - 1][-1]
+            lo, hi = max(0, step.window[0] - 1), step.window[1]
+        self._copy_bands(H, lo, hi, out)
         self._banded += 1
-
-    def _checkpoint(self, index: int, H: Array, Qh: Array) -> None:
-        while len(self.checkpoints) > 1 and (len(self.checkpoints) + 1) * self._state_bytes > self.keep:
-            self.spacing *= 2
-            self.checkpoints = {k: state for k, state in self.checkpoints.items() if k % self.spacing == 0}
-            if index % self.spacing:
-                return
-        if 2 * self._state_bytes <= self.keep:
-            self.checkpoints[index] = (H.copy(), Qh.copy())
 
     @property
     def held(self) -> int:
@@ -89,7 +99,7 @@ class Journal:
             return held
         H, _ = self.rebuild(k)
         out = np.empty((3, self.n), dtype=self.band_type)
-        self._copy_bands(H, out)
+        self._copy_bands(H, 0, self.n, out)
         return out
 
     def rebuild(self, k: int) -> tuple[Array, Array]:
@@ -105,8 +115,12 @@ class Journal:
             return H, Qh
         H, Qh = H.copy(), Qh.copy()
         work = Workspace(H)
+        # checkpoints on the way, as close as the budget allows, so that the next jump to these parts is short
+        close = max(1, -(-len(self.steps) * self._state_bytes // max(1, self.keep)))
         for step in self.steps[start:k]:
             replay_step(H, Qh, work, step)
+            if step.index % close == 0 and step.index < k and self._room():
+                self.checkpoints[step.index] = (H.copy(), Qh.copy())
         self._walk = (k, H, Qh)
         return H, Qh
 

@@ -6,8 +6,6 @@ No pickle is written or accepted, so that opening a file never runs code.
 from __future__ import annotations
 
 import json
-import os
-import tempfile
 import zipfile
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -29,6 +27,7 @@ from schurbench.journal.records import (
     StopReason,
 )
 from schurbench.prepare.preparation import Preparation
+from schurbench.saving import write_whole
 
 if TYPE_CHECKING:
     from schurbench.journal.run import Run
@@ -37,6 +36,9 @@ __all__ = ["is_run", "open_run", "save_run"]
 
 _MARK = "schurbench_run"
 _VERSION = 1
+
+#: Most checkpoints that go into a file; what lies between is rebuilt when someone goes there.
+_CHECKPOINTS = 8
 
 _STEP_KINDS = list(StepKind)
 _DEFLATION_KINDS = list(DeflationKind)
@@ -53,8 +55,6 @@ def is_run(path: str | Path) -> bool:
 
 def save_run(run: Run, path: Path, *, replace: bool) -> Path:
     """Write a run so that the file is either whole or not there; see `Run.save`."""
-    if path.exists() and not replace:
-        raise InputError(f"{path} exists already; choose another name or allow it to be replaced")
     final_H, final_Qh = run._final
     journal = run.journal
     text = {
@@ -78,9 +78,9 @@ def save_run(run: Run, path: Path, *, replace: bool) -> Path:
             "flip": run.preparation.flip,
             "isolated": run.preparation.isolated,
         },
-        "spacing": journal.spacing,
     }
     kept = sorted(journal.checkpoints)
+    kept = kept[:: -(-len(kept) // _CHECKPOINTS)]
     arrays: dict[str, Any] = {
         _MARK: np.frombuffer(json.dumps(text).encode(), dtype=np.uint8),
         "A": run.matrix.array,
@@ -95,18 +95,7 @@ def save_run(run: Run, path: Path, *, replace: bool) -> Path:
         "checkpoint_Qh": np.stack([journal.checkpoints[k][1] for k in kept]),
         **_columns(journal.steps),
     }
-    try:
-        handle, temporary = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
-        try:
-            with os.fdopen(handle, "wb") as stream:
-                np.savez(stream, **arrays)
-            Path(temporary).replace(path)
-        except BaseException:
-            Path(temporary).unlink(missing_ok=True)
-            raise
-    except OSError as error:
-        raise InputError(f"{path} cannot be written ({error.strerror or error}); choose another place") from None
-    return path
+    return write_whole(path, lambda stream: np.savez(stream, **arrays), replace=replace)
 
 
 def open_run(path: str | Path) -> Run:
@@ -163,7 +152,6 @@ def open_run(path: str | Path) -> Run:
         journal = Journal.from_parts(
             _steps(arrays, settings.deflation), windows, checkpoints, arrays["bands"], settings.keep
         )
-        journal.spacing = int(text["spacing"])
         if len(windows) != len(journal.steps) + 1 or 0 not in checkpoints:
             raise InputError(f"{path} is damaged: its steps and windows do not match; save the run again")
         from schurbench.kernels import join

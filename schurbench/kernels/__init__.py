@@ -54,7 +54,7 @@ def warm() -> dict[str, float]:
         calls: list[tuple[str, Callable[[], object]]] = [
             ("single-shift step", partial(sweep, H, Qh, work, (0, 5), (1.0,), 1)),
             ("scan", partial(scan, H, (0, 5), 1, -1.0, 10.0)),
-            ("bands", partial(bands, H, out)),
+            ("bands", partial(bands, H, 0, 5, out)),
         ]
         if kind == "real":
             calls += [

@@ -194,27 +194,32 @@ def standardise_pair(H, Qh, i):
 
 
 @compiled
-def copy_bands(H, out):
-    """Copy diagonal, subdiagonal and superdiagonal into rows 0, 1, 2 of ``out`` (3, n); the last two end with 0."""
+def copy_bands(H, lo, hi, out):
+    """Copy diagonal, subdiagonal and superdiagonal of rows lo … hi−1 of H into rows 0, 1, 2 of ``out`` (3, n).
+
+    Column i of ``out`` gets h[i, i], h[i+1, i] and h[i, i+1]; the last column of all ends with zeros.
+    """
     n = H.shape[0]
-    for i in range(n - 1):
+    for i in range(lo, min(hi, n - 1)):
         out[0, i] = H[i, i]
         out[1, i] = H[i + 1, i]
         out[2, i] = H[i, i + 1]
-    out[0, n - 1] = H[n - 1, n - 1]
-    out[1, n - 1] = 0.0
-    out[2, n - 1] = 0.0
+    if hi == n:
+        out[0, n - 1] = H[n - 1, n - 1]
+        out[1, n - 1] = 0.0
+        out[2, n - 1] = 0.0
 
 
 @compiled
-def copy_bands_complex(H, out):
+def copy_bands_complex(H, lo, hi, out):
     """The same for a complex H in planes; ``out`` is complex, (3, n)."""
     R, I = H[0], H[1]
     n = R.shape[0]
-    for i in range(n - 1):
+    for i in range(lo, min(hi, n - 1)):
         out[0, i] = complex(R[i, i], I[i, i])
         out[1, i] = complex(R[i + 1, i], I[i + 1, i])
         out[2, i] = complex(R[i, i + 1], I[i, i + 1])
-    out[0, n - 1] = complex(R[n - 1, n - 1], I[n - 1, n - 1])
-    out[1, n - 1] = 0.0
-    out[2, n - 1] = 0.0
+    if hi == n:
+        out[0, n - 1] = complex(R[n - 1, n - 1], I[n - 1, n - 1])
+        out[1, n - 1] = 0.0
+        out[2, n - 1] = 0.0

@@ -74,9 +74,9 @@ def deflate(H: np.ndarray, Qh: np.ndarray, row: int, size: int) -> tuple[complex
     return ()
 
 
-def bands(H: np.ndarray, out: np.ndarray) -> None:
-    """Copy diagonal, subdiagonal and superdiagonal of H into ``out``; see `blocks.copy_bands`."""
+def bands(H: np.ndarray, lo: int, hi: int, out: np.ndarray) -> None:
+    """Copy diagonal, subdiagonal and superdiagonal of rows [lo, hi) of H into ``out``; see `blocks.copy_bands`."""
     if H.ndim == 2:
-        copy_bands(H, out)
+        copy_bands(H, lo, hi, out)
     else:
-        copy_bands_complex(H, out)
+        copy_bands_complex(H, lo, hi, out)

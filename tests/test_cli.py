@@ -620,3 +620,16 @@ def test_parser_is_complete() -> None:
     arguments = build_parser().parse_args(["run", "a", "-o", "b", "--shifts=-1,2+3i,2-3j", "--flip"])
     assert arguments.shifts == [-1, 2 + 3j, 2 - 3j]
     assert arguments.flip is True
+
+
+def test_advice_is_in_the_words_of_the_command_line(
+    data: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    file, kept = str(data / "west0067.mtx"), str(tmp_path / "r.npz")
+    assert main(["run", file, "-o", kept, "--strategy", "given"]) == 2
+    assert "add for example --shifts=" in capsys.readouterr().err
+    assert main(["run", file, "-o", kept, "--no-vectors"]) == 0
+    capsys.readouterr()
+    assert main(["export", kept, "-o", str(tmp_path / "f.mat")]) == 2
+    assert "was run with --no-vectors" in capsys.readouterr().err
+    assert not (tmp_path / "f.mat").exists()

@@ -114,6 +114,8 @@ def export(args: argparse.Namespace, console: Console) -> int:
         raise SettingsError(f"there is no region {args.reorder!r} to bring first; choose {' or '.join(REGIONS)}")
     with interruptible() as cancel:
         result = _run_of(args, console, cancel)
+        if not result.settings.accumulate:
+            raise SettingsError(f"{args.file} was run with --no-vectors and has no Z; run it again without that option")
         factors: Factors = result.factors()
         if args.reorder is not None and factors.complete:
             factors = factors.reorder(args.reorder)
@@ -259,6 +261,8 @@ def _settings(args: argparse.Namespace) -> dict[str, Any]:
     given = {name: getattr(args, name) for name in SETTINGS if getattr(args, name, None) is not None}
     if "shifts" in given:
         given.setdefault("strategy", "given")
+    elif given.get("strategy") == "given":
+        raise SettingsError("strategy 'given' needs its list of shifts; add for example --shifts=-1.5,2+3j,2-3j")
     return given
 
 

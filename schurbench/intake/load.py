@@ -184,7 +184,7 @@ def _read_object(source: Any) -> tuple[Found, str]:
                 f"{kind} cannot be turned into an array ({one_line(error)}); give a NumPy array"
             ) from error
     raise InputError(
-        f"a {one_line(type(source).__name__)} is not a matrix; give a path, an array, a sparse matrix, a data "
+        f"an object of type {one_line(type(source).__name__)} is not a matrix; give a path, an array, a sparse matrix, a data "
         "frame or an object with .A"
     )
 

@@ -312,7 +312,7 @@ def _remarks(
         elif word == "complex symmetric":
             say(65, "The matrix is complex symmetric; the QR iteration makes no use of that.")
         else:
-            say(20, f"The matrix is {word} to rounding; a solver for that structure is faster and keeps it exactly.")
+            say(20, f"The matrix is {word} to rounding; the diagnosis of a run names a solver that makes use of that.")
     if p.components > 1 and p.triangular == "no":
         out = p.n - (p.isolated[1] - p.isolated[0])
         take = f"; the default permutation takes {plural(out, 'eigenvalue')} out before any sweep" if out else ""
@@ -325,7 +325,8 @@ def _remarks(
         else:
             say(60, f"Row norms fall by {-p.grading_decades:.3g} decades from top to bottom, the orientation QR likes.")
     if p.departure is not None and p.departure >= 0.9 and p.triangular == "no":
-        say(50, f"Departure from normality is {p.departure:.3g} of the norm: expect some eigenvalues to be sensitive.")
+        share = f"{100.0 * p.departure:.3g} %"
+        say(50, f"Departure from normality is {share} of the norm: expect some eigenvalues to be sensitive.")
     if p.subnormal:
         count = plural(p.subnormal, "subnormal number")
         say(35, f"{count} among the entries, which slow the arithmetic on most processors.")

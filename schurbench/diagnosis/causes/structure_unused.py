@@ -1,4 +1,4 @@
-"""structure-unused: the matrix is symmetric, skew or normal, and a solver for that is faster and keeps it exactly."""
+"""structure-unused: the matrix is symmetric, skew or normal, and a solver for that makes use of it."""
 
 from __future__ import annotations
 

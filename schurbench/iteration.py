@@ -124,8 +124,12 @@ class Iteration:
         self.preparation = prepare(self.matrix, self.settings.form, balance, flip, accumulate)
         self._phases = {"reduce": time.perf_counter() - began, "iterate": 0.0}
 
-        from schurbench.kernels import Workspace, deflate, scan, split, sweep
+        began = time.perf_counter()
+        from schurbench.kernels import Workspace, deflate, make_ready, scan, split, sweep
 
+        self._looks = getattr(self._strategy, "deflation_window", None)
+        make_ready(self.settings.form, self._looks is not None)
+        self._phases["compile"] = time.perf_counter() - began
         self._kernels = (sweep, scan, deflate)
         self._H: Array = split(self.preparation.H)
         self._Qh: Array = split(self.preparation.Qh)
@@ -136,7 +140,6 @@ class Iteration:
         self._tol = -1.0 if tol is None else float(tol)
         self._view = WindowView(self._H)
         self._trusted = type(self._strategy) in _BUILT_IN
-        self._looks = getattr(self._strategy, "deflation_window", None)
         self._window: Window = (0, self.n)
         self._fresh = True  # nothing has been scanned yet
         self._waited = 0

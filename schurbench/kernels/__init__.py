@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable
-from functools import partial
+from functools import cache, partial
 
 import numpy as np
 
@@ -29,11 +29,35 @@ __all__ = [
     "deflate_window",
     "deflation_threshold",
     "join",
+    "make_ready",
     "scan",
     "split",
     "sweep",
     "warm",
 ]
+
+
+_WINDOW = "deflation window"
+
+
+def _calls(kind: str) -> dict[str, Callable[[], object]]:
+    """One small call of every kernel for ``"real"`` or ``"complex"`` matrices, in the order in which a run needs them."""
+    unit = 1.0 if kind == "real" else 1.0 + 0.5j
+    H, Qh = split(np.triu(np.arange(1.0, 26.0).reshape(5, 5), -1) * unit), split(np.eye(5) * (unit / abs(unit)))
+    many = split(np.triu(np.ones((8, 8)) + np.diag(np.arange(8.0)), -1) * unit)
+    out = np.zeros((3, 5), dtype=type(unit))
+    work = Workspace(H)
+    calls: dict[str, Callable[[], object]] = {
+        "bands": partial(bands, H, 0, 5, out),
+        "scan": partial(scan, H, (0, 5), 1, -1.0, 10.0),
+        "single-shift step": partial(sweep, H, Qh, work, (0, 5), (1.0,), 1),
+    }
+    if kind == "real":
+        calls["double-shift sweep"] = partial(sweep, H, Qh, work, (0, 5), (1.0 + 1.0j, 1.0 - 1.0j), 2)
+        calls["2×2 blocks"] = partial(deflate, H, Qh, 3, 2)
+    calls[_WINDOW] = partial(deflate_window, many, many[..., :0, :], (0, 8), 6, 1)
+    calls["threshold"] = partial(deflation_threshold, out[0, 0], out[0, 1], 1.0, 1.0, 1.0, 1.0, 1, -1.0, 1.0)
+    return calls
 
 
 def warm() -> dict[str, float]:
@@ -46,31 +70,26 @@ def warm() -> dict[str, float]:
     """
     spent: dict[str, float] = {}
     for kind in ("real", "complex"):
-        start = np.triu(np.arange(1.0, 26.0).reshape(5, 5), -1)
-        H = split(start if kind == "real" else start * (1.0 + 0.5j))
-        Qh = split(np.eye(5) if kind == "real" else np.eye(5, dtype=complex))
-        out = np.zeros((3, 5), dtype=float if kind == "real" else complex)
-        work = Workspace(H)
-        calls: list[tuple[str, Callable[[], object]]] = [
-            ("single-shift step", partial(sweep, H, Qh, work, (0, 5), (1.0,), 1)),
-            ("scan", partial(scan, H, (0, 5), 1, -1.0, 10.0)),
-            ("bands", partial(bands, H, 0, 5, out)),
-        ]
-        if kind == "real":
-            calls += [
-                ("double-shift sweep", partial(sweep, H, Qh, work, (0, 5), (1.0 + 1.0j, 1.0 - 1.0j), 2)),
-                ("2×2 blocks", partial(deflate, H, Qh, 3, 2)),
-            ]
-        calls.append(
-            ("threshold", partial(deflation_threshold, out[0, 0], out[0, 1], 1.0, 1.0, 1.0, 1.0, 1, -1.0, 1.0))
-        )
-        many = split(np.triu(np.ones((8, 8)) + np.diag(np.arange(8.0)), -1) * (1.0 if kind == "real" else 1.0 + 0.5j))
-        calls.append(("deflation window", partial(deflate_window, many, many[..., :0, :], (0, 8), 6, 1)))
-        for name, call in calls:
+        for name, call in _calls(kind).items():
             began = time.perf_counter()
             call()
             spent[f"{name}, {kind}"] = time.perf_counter() - began
     return spent
+
+
+@cache
+def make_ready(kind: str, windows: bool) -> None:
+    """Compile, or load from the cache, what a run needs, so that its first sweep is not timed with the compiler.
+
+    Parameters
+    ----------
+    kind : {"real", "complex"}
+    windows : bool
+        Whether deflation windows will be looked into; they take longest to compile.
+    """
+    for name, call in _calls(kind).items():
+        if windows or name != _WINDOW:
+            call()
 
 
 def cache_directory() -> str | None:

@@ -223,6 +223,14 @@ def test_executors_give_the_same_bytes(data: Path, pool: str) -> None:
 # Surveys
 
 
+def test_one_entry_needs_no_list() -> None:
+    a = np.diag([1.0, 2.0, 3.0]) + 0.1
+    assert [entry.label for entry in sb.compare(a, "francis").entries] == ["francis"]
+    single = sb.compare(a, {"strategy": "wilkinson", "flip": True})
+    assert single.entries[0].settings is not None
+    assert single.entries[0].settings.flip
+
+
 def test_survey_of_a_folder(tmp_path: Path, data: Path) -> None:
     for name in ("west0067.mtx", "closedloop_carex15.npz"):
         (tmp_path / name).write_bytes((data / name).read_bytes())

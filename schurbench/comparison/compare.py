@@ -206,7 +206,7 @@ class Comparison:
 
 def compare(
     matrix: Any,
-    entries: Sequence[str | Mapping[str, Any]] | None = None,
+    entries: Sequence[str | Mapping[str, Any]] | str | Mapping[str, Any] | None = None,
     executor: Executor | None = None,
     progress: Callable[[ComparisonProgress], object] | None = None,
     cancel: threading.Event | None = None,
@@ -217,8 +217,8 @@ def compare(
     Parameters
     ----------
     matrix : WorkingMatrix, or anything `schurbench.load` accepts
-    entries : sequence of str or dict, optional
-        Strategy names, or keywords of `schurbench.iterate`. By default francis, wilkinson and rayleigh.
+    entries : sequence of str or dict, or one of them, optional
+        Strategy names or keywords of `schurbench.iterate`. By default francis, wilkinson and rayleigh.
     executor : concurrent.futures.Executor, optional
         Where entries run at the same time; without one they run one after another, which gives the fairer seconds.
     progress : callable, optional
@@ -241,6 +241,8 @@ def compare(
         There is no entry to compare.
     """
     m = load(matrix)
+    if isinstance(entries, str | Mapping):  # its letters or keywords would count as entries
+        entries = [entries]
     asked = [_keywords(entry, common) for entry in (DEFAULT_ENTRIES if entries is None else entries)]
     if not asked:
         raise SettingsError("there is nothing to compare; name at least one strategy or setting")

@@ -65,7 +65,7 @@ class RealShiftOnPair:
             f"({number(100 * e['share_of_sweeps_with_complex_pair'])} % of the sweeps; at the end "
             f"{number(e['real_part_of_pair'])} ± {number(e['imaginary_part_of_pair'])}i) while every shift was real: "
             f"the last one, {number(e['last_shift'])}, is {number(e['distance_to_pair'])} from both members, so the "
-            f"entry between them shrinks by {number(e['predicted_decay_per_sweep'])} a sweep (measured "
+            f"entry between them shrinks by a factor of {number(e['predicted_decay_per_sweep'])} a sweep (measured "
             f"{number(e['measured_decay_per_sweep'])}){case.carriers(worst.rows)}."
         )
         return Finding(

@@ -41,7 +41,7 @@ def test_single_shift_step_is_rq_plus_shift(dtype: type, n: int, lo: int, hi: in
     planes, Qh = split(H0), split(np.eye(n, dtype=dtype))
     work = Workspace(planes)
     rotations = sweep(planes, Qh, work, (lo, hi), (shift,), 1)
-    H, Qh, S = join(planes), join(Qh), join(work.S[..., None, :])[0]
+    H, Qh, S = join(planes), join(Qh), join(work.S[0][..., None, :])[0]
 
     assert rotations == hi - lo - 1
     # Hessenberg form is kept exactly, and so are the zeros at the window's edges
@@ -50,7 +50,7 @@ def test_single_shift_step_is_rq_plus_shift(dtype: type, n: int, lo: int, hi: in
         if 0 < edge < n:
             assert H[edge, edge - 1] == 0.0
     # Qᴴ H Q = the next H, with Q multiplied out from the recorded rotations
-    Q = q_of_rotations(n, lo, hi, work.C, S)
+    Q = q_of_rotations(n, lo, hi, work.C[0], S)
     np.testing.assert_allclose(Qh, Q.conj().T, atol=20 * ULP)
     np.testing.assert_allclose(H, Q.conj().T @ H0 @ Q, atol=40 * n * ULP)
     # and Q is the Q of H − σI = QR: QᴴH − σQᴴ is upper triangular in the window

@@ -43,17 +43,18 @@ class Rotations(Sequence[Rotation]):
         if H.ndim == 2 and len(step.shifts) > 1:
             for i in range(0, len(step.shifts), 2):
                 sweep(H, none, work, step.window, step.shifts[i : i + 2], step.index + APART * i)
+                V = work.V[0]
                 for k in range(lo, hi - 1):
-                    v = np.array([1.0, work.V[k, 1], work.V[k, 2]][: min(3, hi - k)])
-                    acts.append((k, "both", np.eye(len(v)) - work.V[k, 0] * np.outer(v, v), 0.0))
+                    v = np.array([1.0, V[k, 1], V[k, 2]][: min(3, hi - k)])
+                    acts.append((k, "both", np.eye(len(v)) - V[k, 0] * np.outer(v, v), 0.0))
         else:
             for i, shift in enumerate(step.shifts):
                 typed = shift.real if H.ndim == 2 else shift
                 sweep(H, none, work, step.window, (shift,), step.index + APART * i)
-                S = join(work.S[..., None, :])[0]
+                C, S = work.C[0], join(work.S[0][..., None, :])[0]
                 for side in ("left", "right"):
                     for k in range(lo, hi - 1):
-                        c, s = work.C[k], S[k]
+                        c, s = C[k], S[k]
                         edge = (side == "left" and k == lo) or (side == "right" and k == hi - 2)
                         acts.append((k, side, np.array([[c, s], [-np.conj(s), c]]), typed if edge else 0.0))
         self._acts = acts

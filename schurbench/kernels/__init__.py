@@ -14,9 +14,9 @@ import numpy as np
 
 from schurbench.kernels.blocks import deflation_threshold
 from schurbench.kernels.deflation_window import WindowOutcome, deflate_window
-from schurbench.kernels.engine import APART, bands, deflate, scan, sweep
+from schurbench.kernels.engine import bands, deflate, scan, sweep
 from schurbench.kernels.planes import join, split
-from schurbench.kernels.sweeps import single_shift_step
+from schurbench.kernels.sweeps import APART, single_shift_steps
 from schurbench.kernels.workspace import Workspace
 
 __all__ = [
@@ -94,6 +94,6 @@ def make_ready(kind: str, windows: bool) -> None:
 
 def cache_directory() -> str | None:
     """Directory of the on-disk cache, or None where no directory can be written."""
-    stats = getattr(single_shift_step, "stats", None)
+    stats = getattr(single_shift_steps, "stats", None)
     path = getattr(stats, "cache_path", None)
     return str(path) if path else None

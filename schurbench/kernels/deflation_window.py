@@ -67,9 +67,9 @@ def deflate_window(H: np.ndarray, Qh: np.ndarray, window: tuple[int, int], size:
     T, Vh = split(np.triu(join(block), -1)), split(np.eye(m, dtype=float if H.ndim == 2 else complex))
     norm = float(np.sqrt(np.square(T).sum()))
     if H.ndim == 2:
-        fine = small_schur(T, Vh, np.zeros((m, 3)), norm, 1009 * index)
+        fine = small_schur(T, Vh, np.zeros((1, m, 3)), norm, 1009 * index)
     else:
-        fine = small_schur_complex(T, Vh, np.ones(m), np.zeros((2, m)), norm, 1009 * index)
+        fine = small_schur_complex(T, Vh, np.ones((1, m)), np.zeros((1, 2, m)), norm, 1009 * index)
     if not fine:
         return WindowOutcome(top, (), (), (), converged=False)
 

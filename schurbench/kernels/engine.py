@@ -16,13 +16,10 @@ from schurbench.kernels.blocks import (
     scan_up_complex,
     standardise_pair,
 )
-from schurbench.kernels.sweeps import double_shift_sweep, single_shift_step, single_shift_step_complex
+from schurbench.kernels.sweeps import double_shift_sweeps, single_shift_steps, single_shift_steps_complex
 from schurbench.kernels.workspace import Workspace
 
-__all__ = ["APART", "bands", "deflate", "scan", "sweep"]
-
-#: The i-th shift of a step rounds as if the step had this many times i added to its index, so that no two round alike.
-APART = 7919
+__all__ = ["bands", "deflate", "scan", "sweep"]
 
 
 def sweep(
@@ -34,17 +31,14 @@ def sweep(
     and in single-shift steps on a complex one. ``index`` is that of the step, by which last bits are rounded in turn.
     """
     lo, hi = window
-    rotations = 0
+    m = len(shifts)
     if H.ndim == 3:
-        for i, shift in enumerate(shifts):
-            rotations += single_shift_step_complex(H, Qh, lo, hi, complex(shift), work.C, work.S, index + APART * i)
-    elif len(shifts) == 1:
-        rotations = single_shift_step(H, Qh, lo, hi, shifts[0].real, work.C, work.S, index)
-    else:
-        for i in range(0, len(shifts), 2):
-            a, b = shifts[i], shifts[i + 1]
-            rotations += double_shift_sweep(H, Qh, lo, hi, a.real, a.imag, b.real, b.imag, work.V, index + APART * i)
-    return rotations
+        work.singles(m)
+        return single_shift_steps_complex(H, Qh, lo, hi, np.array(shifts, dtype=complex), work.C, work.S, index)
+    if m == 1:
+        return single_shift_steps(H, Qh, lo, hi, np.array([shifts[0].real]), work.C, work.S, index)
+    work.doubles(m // 2)
+    return double_shift_sweeps(H, Qh, lo, hi, np.array(shifts, dtype=complex).reshape(-1, 2), work.V, index)
 
 
 def scan(H: np.ndarray, window: tuple[int, int], test: int, tol: float, norm: float) -> tuple[int, float, float]:

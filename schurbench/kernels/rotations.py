@@ -218,10 +218,10 @@ def reflect_rows(A, k, j0, j1, t, v1, v2):
 
 
 @inlined
-def reflect_rows_twice(A, k, t, v1, v2, u, w1, w2):
-    """Reflector (t, v) at row k and then (u, w) at row k+1 on all columns of A: one pass over four rows instead of two
-    passes over three."""
-    r0, r1, r2, r3 = A[k], A[k + 1], A[k + 2], A[k + 3]
+def reflect_rows_twice(A, k, j0, j1, t, v1, v2, u, w1, w2):
+    """Reflector (t, v) at row k and then (u, w) at row k+1 on columns [j0, j1) of A: one pass over four rows instead of
+    two passes over three."""
+    r0, r1, r2, r3 = A[k, j0:j1], A[k + 1, j0:j1], A[k + 2, j0:j1], A[k + 3, j0:j1]
     t1 = t * v1
     t2 = t * v2
     u1 = u * w1
@@ -249,12 +249,12 @@ def _rotate_row_right(row, k0, k1, C, S):
 
 
 @compiled
-def rotate_right(A, lo, hi, C, S):
-    """Rows [0, hi) of A times the adjoints of rotations lo … hi−2, where row i of the window starts at rotation i−1."""
+def rotate_right(A, top, end, lo, hi, C, S):
+    """Rows [top, end) of A times the adjoints of rotations lo … hi−2, where row i of the window starts at rotation i−1."""
     last = hi - 1
-    i = 0
-    while i < hi:
-        if i + 4 <= hi:
+    i = top
+    while i < end:
+        if i + 4 <= end:
             # the first rotation that all four rows share
             k0 = min(max(lo, i + 2), last)
             for r in range(4):
@@ -303,12 +303,12 @@ def _rotate_row_right_complex(rr, ri, k0, k1, C, Sr, Si):
 
 
 @compiled
-def rotate_right_complex(R, I, lo, hi, C, Sr, Si):
+def rotate_right_complex(R, I, top, end, lo, hi, C, Sr, Si):
     """The same for a complex matrix R + iI and rotations with s = Sr + i·Si; two rows at a time."""
     last = hi - 1
-    i = 0
-    while i < hi:
-        if i + 2 <= hi:
+    i = top
+    while i < end:
+        if i + 2 <= end:
             k0 = min(max(lo, i), last)
             start = max(lo, i - 1)
             if start < k0:
@@ -352,16 +352,16 @@ def _reflect_row_right(row, k0, k1, V):
 
 
 @compiled
-def reflect_right(A, lo, hi, V):
-    """Rows [0, hi) of A times reflectors lo … hi−2, where row i of the window starts at reflector i.
+def reflect_right(A, top, end, lo, hi, V):
+    """Rows [top, end) of A times reflectors lo … hi−2, where row i of the window starts at reflector i.
 
     The last reflector, hi−2, has two elements only (V[hi−2, 2] is not read). Six rows at a time keep the arithmetic units
     busy (14 µs against 17 with four and 30 with two, n = 200); what was computed last enters each sum last.
     """
     last = hi - 2  # three-element reflectors are lo … last−1
-    i = 0
-    while i < hi:
-        if i + 6 <= hi:
+    i = top
+    while i < end:
+        if i + 6 <= end:
             k0 = min(max(lo, i + 5), max(last, lo))
             for r in range(6):
                 start = max(lo, i + r)
@@ -415,7 +415,7 @@ def reflect_right(A, lo, hi, V):
             i += 1
     t = V[last, 0]
     v1 = V[last, 1]
-    for i in range(min(hi, last + 1)):
+    for i in range(top, min(end, last + 1)):
         w = t * (A[i, last] + v1 * A[i, last + 1])
         A[i, last] -= w
         A[i, last + 1] -= w * v1

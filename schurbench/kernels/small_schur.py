@@ -9,9 +9,11 @@ from __future__ import annotations
 import cmath
 import math
 
+import numpy as np
+
 from schurbench.kernels._jit import compiled
 from schurbench.kernels.blocks import scan_up, scan_up_complex, standardise_pair
-from schurbench.kernels.sweeps import double_shift_sweep, single_shift_step_complex
+from schurbench.kernels.sweeps import double_shift_sweeps, single_shift_steps_complex
 
 __all__ = ["small_schur", "small_schur_complex"]
 
@@ -25,7 +27,7 @@ def small_schur(T, Qh, V, norm, salt):
     Parameters
     ----------
     T : (m, m) float64, upper Hessenberg; Qh : (m, m) float64
-    V : (m, 3) float64
+    V : (1, m, 3) float64
         Room for reflectors.
     norm : float
         Frobenius norm of T.
@@ -37,6 +39,7 @@ def small_schur(T, Qh, V, norm, salt):
         False when 30 max(10, m) sweeps were not enough.
     """
     m = T.shape[0]
+    pair = np.empty((1, 2), dtype=np.complex128)
     lo, hi, waited = 0, m, 0
     for sweep in range(30 * max(10, m)):
         while hi > 0:
@@ -74,15 +77,17 @@ def small_schur(T, Qh, V, norm, salt):
                 re1 = d - b * c / root if root != 0.0 else d
                 re2 = d + root
                 im1 = im2 = 0.0
-        double_shift_sweep(T, Qh, lo, hi, re1, im1, re2, im2, V, salt + sweep)
+        pair[0, 0], pair[0, 1] = complex(re1, im1), complex(re2, im2)
+        double_shift_sweeps(T, Qh, lo, hi, pair, V, salt + sweep)
     return False
 
 
 @compiled
 def small_schur_complex(T, Qh, C, S, norm, salt):
-    """Complex Schur form in place, matrices in planes; parameters and result as above, C (m,) and S (2, m) for room."""
+    """Complex Schur form in place, matrices in planes; parameters and result as above, C (1, m) and S (1, 2, m) for room."""
     R, I = T[0], T[1]
     m = R.shape[0]
+    one = np.empty(1, dtype=np.complex128)
     lo, hi, waited = 0, m, 0
     for sweep in range(30 * max(10, m)):
         while hi > 0:
@@ -111,5 +116,6 @@ def small_schur_complex(T, Qh, C, S, norm, salt):
             pivot = half + root if abs(half + root) > abs(half - root) else half - root
             if pivot != 0.0:
                 shift = d - product / pivot
-        single_shift_step_complex(T, Qh, lo, hi, shift, C, S, salt + sweep)
+        one[0] = shift
+        single_shift_steps_complex(T, Qh, lo, hi, one, C, S, salt + sweep)
     return False

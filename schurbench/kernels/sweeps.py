@@ -4,9 +4,8 @@ Preconditions of every kernel: H is square, row-major, upper Hessenberg; ``Qh`` 
 or has no rows when Z is not wanted; H[lo, lo−1] = 0 and H[hi, hi−1] = 0 where these entries exist. Complex matrices come
 as two planes (see `planes`).
 
-A sweep works on the window alone, where its rotations are found, and keeps them. When all shifts of a step are through,
-the columns right of the window, the rows above it and Zᴴ take all rotations of all shifts, a block at a time that stays
-in the cache (`rest`): at n = 1000 that halves the time of a sweep with many shifts.
+A sweep works on the window alone, where its rotations are found; the columns right of the window, the rows above it and
+Zᴴ take them afterwards (`rest`).
 """
 
 from __future__ import annotations
@@ -72,7 +71,7 @@ def single_shift_steps(H, Qh, lo, hi, shifts, C, S, salt):
     m = shifts.size
     for b in range(m):
         _single_shift_step(H, lo, hi, shifts[b], C[b], S[b], salt + APART * b)
-    rotate_rest(H, Qh, lo, hi, C, S, m)
+        rotate_rest(H, Qh, lo, hi, C[b], S[b])
     return m * (hi - lo - 1)
 
 
@@ -121,7 +120,7 @@ def single_shift_steps_complex(H, Qh, lo, hi, shifts, C, S, salt):
     m = shifts.size
     for b in range(m):
         _single_shift_step_complex(H, lo, hi, shifts[b], C[b], S[b], salt + APART * b)
-    rotate_rest_complex(H, Qh, lo, hi, C, S, m)
+        rotate_rest_complex(H, Qh, lo, hi, C[b], S[b])
     return m * (hi - lo - 1)
 
 
@@ -200,5 +199,5 @@ def double_shift_sweeps(H, Qh, lo, hi, shifts, V, salt):
     for b in range(m):
         first, second = shifts[b, 0], shifts[b, 1]
         _double_shift_sweep(H, lo, hi, first.real, first.imag, second.real, second.imag, V[b], salt + 2 * APART * b)
-    reflect_rest(H, Qh, lo, hi, V, m)
+        reflect_rest(H, Qh, lo, hi, V[b])
     return m * (hi - lo - 1)

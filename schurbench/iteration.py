@@ -11,6 +11,7 @@ import cmath
 import threading
 import time
 from collections.abc import Callable, Sequence
+from numbers import Real
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -560,7 +561,14 @@ def _resolve(
             "the given shifts are not closed under conjugation; add the conjugates or use form='complex'"
         )
     deflation_test(deflation)
-    if tol is not None and not (isinstance(tol, (int, float)) and 0.0 <= tol < float("inf")):
+    switches: dict[str, Any] = {"flip": flip, "accumulate": accumulate, "stop_when_stalled": stop_when_stalled}
+    for name, value in switches.items():
+        if not isinstance(value, (bool, np.bool_)):
+            raise SettingsError(f"{name} {value!r} is neither True nor False; give one of them")
+    level: Any = tol  # whatever a caller may have passed
+    if level is not None and (
+        isinstance(level, bool) or not isinstance(level, Real) or not 0.0 <= float(level) < float("inf")
+    ):
         raise SettingsError(f"tol {tol!r} is no level; give a number of at least 0, or None for rounding level")
     if limit is not None and (isinstance(limit, bool) or not isinstance(limit, (int, np.integer)) or limit < 1):
         raise SettingsError(f"limit {limit!r} is no number of sweeps; give an integer of at least 1")

@@ -191,6 +191,14 @@ def test_deflation_tests_differ_where_they_should() -> None:
     assert scan(G, (0, 2), 2, 1e-15, 1e6)[0] == 1
 
 
+def test_a_hollow_block_is_judged_by_its_neighbours() -> None:
+    """Zero diagonal, as in bipartite matrices: eigenvalues ±sqrt(ab) of [0 a; b 0] are dropped at rounding of what is near."""
+    H = np.diag([1.0, 1.0, 1.0], 1) + np.diag([1.0, 1e-20, 1.0], -1)
+    assert scan(H, (0, 4), 1, -1.0, 2.0)[0] == 0  # they are 1e-10
+    H[2, 1] = 1e-34
+    assert scan(H, (0, 4), 1, -1.0, 2.0)[0] == 2  # they are 1e-17
+
+
 def test_bands() -> None:
     H = hessenberg(6, complex, seed=2)
     out = np.empty((3, 6), dtype=complex)

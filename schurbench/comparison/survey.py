@@ -21,6 +21,7 @@ from schurbench.intake import load
 from schurbench.iteration import iterate
 from schurbench.journal import Run, is_run
 from schurbench.prepare.plain import plain, plural
+from schurbench.saving import write_whole
 
 __all__ = ["Survey", "SurveyRow", "survey"]
 
@@ -141,17 +142,7 @@ class Survey:
             writer.writeheader()
             writer.writerows(row.to_dict() for row in self.rows)
             text = buffer.getvalue()
-        fresh = path.with_name(f".saving-{os.getpid()}-{path.name}")
-        try:
-            with fresh.open("x", encoding="utf-8", newline="") as stream:
-                stream.write(text)
-            fresh.replace(path)
-        except FileExistsError:
-            raise InputError(f"{fresh} is in the way; remove it, an earlier survey left it behind") from None
-        except BaseException:
-            fresh.unlink(missing_ok=True)
-            raise
-        return path
+        return write_whole(path, lambda stream: stream.write(text.encode()), replace=replace)
 
 
 def survey(

@@ -44,7 +44,8 @@ def deflation_threshold(a, d, low, up, before, after, test, tol, norm):
     if test == 2:
         return tol if tol >= 0.0 else max(TINY, ULP * norm)
     size = abs(a) + abs(d)
-    if size == 0.0:
+    hollow = size == 0.0
+    if hollow:
         # both neighbours vanish: judge by the next subdiagonal entries, then by the norm
         size = before + after
         if size == 0.0:
@@ -52,6 +53,9 @@ def deflation_threshold(a, d, low, up, before, after, test, tol, norm):
     first = tol if tol >= 0.0 else max(TINY, ULP * size)
     if test == 0:
         return first
+    if hollow:
+        # the block has the eigenvalues ±sqrt(|h₂₁||h₁₂|), which must be rounding of the neighbours to be dropped
+        return min(first, max(TINY, first * (first / up))) if up > 0.0 else first
     eps = first / size if size > 0.0 else ULP
     gap = abs(a - d)
     big, small = max(low, up), min(low, up)

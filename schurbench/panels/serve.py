@@ -173,9 +173,9 @@ def open_workbench(
     wanted = {"voila" if page else "jupyterlab": None, "ipywidgets": None, "bqplot": None}
     missing = [name for name in wanted if find_spec(name) is None]
     if missing:
-        extra = " 'voila>=0.5'" if "voila" in missing else ""
         raise SchurbenchError(
-            f"{' and '.join(missing)} not found; to open the workbench, run: pip install 'schurbench[workbench]'{extra}"
+            f"{' and '.join(missing)} not found; to open the workbench, run: "
+            f"pip install 'schurbench[{'page' if page else 'workbench'}]'"
         )
     stem = "schurbench_demo"
     if file is not None:

@@ -105,12 +105,12 @@ def _disagreement(decay: Decay) -> float:
 def _remedy(case: Case, kept: bool = False) -> SettingsRemedy:
     settings = case.run.settings
     adaptive = "francis" if settings.form == "real" else "wilkinson"
-    if kept and settings.strategy == adaptive and settings.deflation == "ahues-tisseur":
+    if kept and settings.strategy == adaptive and settings.deflation != "norm":
         return change(
             case,
-            "Judge an entry by its neighbours alone (deflation test 'neighbour'); where the small diagonal entries matter, "
-            "compare the small eigenvalues of both runs.",
-            deflation="neighbour",
+            "Judge entries by the norm of H (deflation test 'norm'); where the small diagonal entries matter, compare the "
+            "small eigenvalues of both runs.",
+            deflation="norm",
         )
     if settings.strategy != adaptive:
         return change(

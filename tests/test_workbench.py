@@ -36,7 +36,7 @@ def shared() -> Iterator[sb.Workbench]:
 
 
 def texts(wb: sb.Workbench) -> list[str]:
-    return [wb._where.value, *(line.value for line in wb._say.values())]
+    return [wb._page.where.value, *(line.value for line in wb._page.say.values())]
 
 
 # --- showing ------------------------------------------------------------------------------------------------------
@@ -57,15 +57,15 @@ def test_every_panel_follows_the_cursor(shared: sb.Workbench) -> None:
     shared.cursor = 10
     shared.wait(PATIENCE)
     before = texts(shared)
-    picture = shared._matrix_figure._swap.mark.image.value
+    picture = shared._page.matrix._swap.mark.image.value
     shared.cursor = 100
     shared.wait(PATIENCE)
     assert all(a != b for a, b in zip(before, texts(shared), strict=True))
-    assert shared._matrix_figure._swap.mark.image.value != picture
-    for figure in (shared._track, shared._subdiagonal.picture, shared._deflations):
+    assert shared._page.matrix._swap.mark.image.value != picture
+    for figure in (shared._page.track, shared._page.subdiagonal.picture, shared._page.deflations):
         assert list(figure._cursor.x) == [100, 100]
-    assert shared._slider.value == 100
-    shared._slider.value = 30
+    assert shared._page.slider.value == 100
+    shared._page.slider.value = 30
     assert shared.cursor == 30
 
 
@@ -74,19 +74,19 @@ def test_clicks_choose_a_step_and_a_row_everywhere(shared: sb.Workbench) -> None
         message = {"event": "element_click", "data": {"click_x": x, "click_y": y}}
         figure._surface._handle_custom_msgs(None, message)  # type: ignore[attr-defined]
 
-    click(shared._track, 50.3, 2.0)
+    click(shared._page.track, 50.3, 2.0)
     assert shared.cursor == 50
-    click(shared._subdiagonal.picture, 61.8, 7.2)
+    click(shared._page.subdiagonal.picture, 61.8, 7.2)
     assert (shared.cursor, shared.row) == (62, 7)
     shared.wait(PATIENCE)
-    for figure in (shared._matrix_figure, shared._subdiagonal.picture, shared._deflations):
+    for figure in (shared._page.matrix, shared._page.subdiagonal.picture, shared._page.deflations):
         assert list(figure._row.y) == [7, 7]
-    click(shared._matrix_figure, 3.0, 7.4)
+    click(shared._page.matrix, 3.0, 7.4)
     assert shared.row is None  # the same row again: back to following the iteration
-    click(shared._deflations, -40.0, 1e9)
+    click(shared._page.deflations, -40.0, 1e9)
     assert (shared.cursor, shared.row) == (0, shared.matrix.n - 1)
     values = shared.run.to_matrix_units(shared.run.ritz(0))
-    click(shared._spectrum, float(values[5].real), float(values[5].imag))
+    click(shared._page.spectrum, float(values[5].real), float(values[5].imag))
     assert shared.row is not None
     assert values[shared.row] == values[5]
     shared.row = None
@@ -94,14 +94,14 @@ def test_clicks_choose_a_step_and_a_row_everywhere(shared: sb.Workbench) -> None
 
 def test_buttons_walk_from_deflation_to_deflation(shared: sb.Workbench) -> None:
     steps = sorted({d.step for d in shared.run.deflations})
-    shared._to_start.click()
+    shared._page.to_start.click()
     assert shared.cursor == 0
-    shared._to_next.click()
-    shared._to_next.click()
+    shared._page.to_next.click()
+    shared._page.to_next.click()
     assert shared.cursor == steps[1]
-    shared._to_last.click()
+    shared._page.to_last.click()
     assert shared.cursor == steps[0]
-    shared._to_longest.click()
+    shared._page.to_longest.click()
     assert shared.run.waits[shared.cursor - 1] >= shared.run.waits.max() - 1
 
 
@@ -113,22 +113,22 @@ def test_figures_are_updated_and_never_rebuilt(shared: sb.Workbench) -> None:
     before = len(ipywidgets.widgets.widget._instances)
     for k in range(2, 40):
         shared.cursor = k
-    shared._curves.value = True
+    shared._page.curves.value = True
     shared.row = 3
-    shared._curves.value = False
+    shared._page.curves.value = False
     shared.row = None
     shared.wait(PATIENCE)
     assert len(ipywidgets.widgets.widget._instances) == before
 
 
 def test_curves_show_the_chosen_row(shared: sb.Workbench) -> None:
-    shared._curves.value = True
+    shared._page.curves.value = True
     shared.row = 20
-    assert shared._subdiagonal.widget.children == (shared._subdiagonal.curves.widget,)
+    assert shared._page.subdiagonal.widget.children == (shared._page.subdiagonal.curves.widget,)
     recorded = [shared.run.subdiagonal(k)[19] for k in range(5)]
-    drawn = np.array(shared._subdiagonal.curves._chosen.y[:5])
+    drawn = np.array(shared._page.subdiagonal.curves._chosen.y[:5])
     np.testing.assert_allclose(10.0**drawn, recorded, rtol=1e-12)
-    shared._curves.value = False
+    shared._page.curves.value = False
     shared.row = None
 
 
@@ -144,9 +144,9 @@ def test_a_finished_run_can_be_shown() -> None:
 def test_names_from_the_data_cannot_become_markup() -> None:
     wb = sb.Workbench(sb.load(np.diag([1.0, 2.0]) + 1e-3, name="<img src=x onerror=alert(1)>"))
     wb.wait(PATIENCE)
-    shown = [wb._head.value, *texts(wb), wb._save.verdict.value]
+    shown = [wb._page.head.value, *texts(wb), wb._page.save.verdict.value]
     assert not any("<img" in text for text in shown)
-    assert "&lt;img" in wb._head.value
+    assert "&lt;img" in wb._page.head.value
     wb.close()
 
 
@@ -154,8 +154,8 @@ def test_a_matrix_too_large_to_run_unasked_waits_for_its_settings() -> None:
     wb = sb.Workbench(np.triu(np.ones((401, 401))))
     assert wb.run is None
     assert wb.status == "ready"
-    assert "press Run" in wb._work.status.value
-    assert "n = 401" in wb._head.value
+    assert "press Run" in wb._page.work.status.value
+    assert "n = 401" in wb._page.head.value
     wb.close()
 
 
@@ -166,18 +166,22 @@ def test_settings_reach_the_run_and_the_page() -> None:
     wb = sb.Workbench(np.random.default_rng(31).standard_normal((12, 12)), strategy="wilkinson", tol=1e-10, limit=500)
     wb.wait(PATIENCE)
     assert (wb.run.settings.strategy, wb.run.settings.tol, wb.run.settings.limit) == ("wilkinson", 1e-10, 500)
-    assert (wb._form.strategy.value, float(wb._form.tol.value), wb._form.limit.value) == ("wilkinson", 1e-10, "500")
-    wb._form.strategy.value = "given"
-    wb._form.shifts.value = "1.5, -2+3i, -2-3i"
-    wb._form.limit.value = "4"
+    assert (wb._page.form.strategy.value, float(wb._page.form.tol.value), wb._page.form.limit.value) == (
+        "wilkinson",
+        1e-10,
+        "500",
+    )
+    wb._page.form.strategy.value = "given"
+    wb._page.form.shifts.value = "1.5, -2+3i, -2-3i"
+    wb._page.form.limit.value = "4"
     assert wb.shifts == (1.5, -2 + 3j, -2 - 3j)
     wb.start()
     wb.wait(PATIENCE)
     assert wb.run.settings.strategy == "given"
     assert wb.run.stop.reason == "limit"
     assert wb.status == "stopped"
-    assert "findings" in wb._work.status.value
-    wb._form.limit.value = ""
+    assert "findings" in wb._page.work.status.value
+    wb._page.form.limit.value = ""
     assert wb.limit is None
     wb.close()
 
@@ -187,7 +191,7 @@ def test_a_long_run_is_watched_and_cancelled_and_what_was_done_is_kept() -> None
     wb = sb.Workbench(cyclic, strategy="zero", balance="none", limit=10**6, autostart=False)
     assert wb.status == "ready"
     told: list[float] = []
-    wb._work.status.observe(lambda change: told.append(time.monotonic()), "value")
+    wb._page.work.status.observe(lambda change: told.append(time.monotonic()), "value")
     wb.start()
     with pytest.raises(sb.SchurbenchError, match="under way"):
         wb.start()
@@ -208,7 +212,7 @@ def test_comparison_of_what_is_ticked(shared: sb.Workbench) -> None:
     assert [entry.label for entry in shared.comparison.entries] == ["auto", "wilkinson", "francis"]
     for entry in shared.comparison.entries:
         assert entry.figures.passed
-        assert str(entry.figures.sweeps) in shared._compare_form.table.value
+        assert str(entry.figures.sweeps) in shared._page.compare.table.value
     assert shared.status == "finished"
 
 
@@ -233,7 +237,7 @@ def test_a_structured_solver_is_a_remedy_too() -> None:
     finding = next(f for f in wb.diagnosis.findings if f.cause == "structure-unused")
     wb._try_remedy(finding)
     wb.wait(PATIENCE)
-    assert "Structured solver" in wb._work.status.value
+    assert "Structured solver" in wb._page.work.status.value
     wb.close()
 
 
@@ -256,7 +260,7 @@ def test_export_writes_factors_of_the_loaded_matrix(shared: sb.Workbench, tmp_pa
     t, z = np.ascontiguousarray(loaded["T"]), np.ascontiguousarray(loaded["Z"])
     assert residual_ratio(shared.matrix.array, z, t) < RATIO_LIMIT
     assert orthogonality_ratio(z) < RATIO_LIMIT
-    assert f'download="plant{suffix}"' in shared._save.link.value
+    assert f'download="plant{suffix}"' in shared._page.save.link.value
     with pytest.raises(sb.InputError, match="exists"):
         shared.export(written[0])
     shared.export(written[0], replace=True)
@@ -277,21 +281,21 @@ def test_bad_input_is_refused_where_it_is_given() -> None:
 def test_an_empty_workbench_says_what_to_do(tmp_path: Path) -> None:
     wb = sb.Workbench()
     assert wb.status == "empty"
-    assert "Open a file" in wb._head.value
+    assert "Open a file" in wb._page.head.value
     for action in (wb.start, wb.compare_now, lambda: wb.export(tmp_path / "x.mat")):
         with pytest.raises(sb.InputError, match=r"no matrix yet|no run yet"):
             action()
-    wb._open.go.click()
-    assert "no file is named" in wb._open.error.value
-    wb._open.path.value = str(tmp_path / "absent.npy")
-    wb._open.go.click()
-    assert "absent.npy" in wb._open.error.value
+    wb._page.open.go.click()
+    assert "no file is named" in wb._page.open.error.value
+    wb._page.open.path.value = str(tmp_path / "absent.npy")
+    wb._page.open.go.click()
+    assert "absent.npy" in wb._page.open.error.value
     assert wb.matrix is None
     np.save(tmp_path / "there.npy", np.diag([1.0, 2.0, 3.0]))
-    wb._open.path.value = str(tmp_path / "there.npy")
-    wb._open.go.click()
+    wb._page.open.path.value = str(tmp_path / "there.npy")
+    wb._page.open.go.click()
     wb.wait(PATIENCE)
-    assert wb._open.error.value == ""
+    assert wb._page.open.error.value == ""
     assert wb.run.converged
     wb.close()
 
@@ -307,14 +311,14 @@ def test_uploads_are_loaded_and_bad_ones_keep_what_was_there(tmp_path: Path) -> 
         return {"name": name, "type": "", "size": len(content), "last_modified": now, "content": memoryview(content)}
 
     wb = sb.Workbench()
-    wb._open.upload.value = (item("../../plant.npy", content),)
+    wb._page.open.upload.value = (item("../../plant.npy", content),)
     wb.wait(PATIENCE)
     assert (wb.matrix.name, wb.matrix.source) == ("plant", "uploaded plant.npy")
-    assert wb._open.upload.value == ()
+    assert wb._page.open.upload.value == ()
     kept = wb.matrix
-    wb._open.upload.value = (item("cut.npy", content[:-5]),)
-    assert wb._open.error.value
-    assert "\n" not in wb._open.error.value
+    wb._page.open.upload.value = (item("cut.npy", content[:-5]),)
+    assert wb._page.open.error.value
+    assert "\n" not in wb._page.open.error.value
     assert wb.matrix is kept
     wb.close()
 
@@ -325,11 +329,11 @@ def test_uploads_are_loaded_and_bad_ones_keep_what_was_there(tmp_path: Path) -> 
 )
 def test_text_that_is_no_number_is_explained(shared: sb.Workbench, field: str, text: str, message: str) -> None:
     before = getattr(shared, field)
-    getattr(shared._form, field).value = text
-    assert message in shared._form.error.value
+    getattr(shared._page.form, field).value = text
+    assert message in shared._page.form.error.value
     assert getattr(shared, field) == before
-    getattr(shared._form, field).value = ""
-    assert shared._form.error.value == ""
+    getattr(shared._page.form, field).value = ""
+    assert shared._page.form.error.value == ""
 
 
 def test_settings_that_do_not_fit_the_matrix_fail_in_one_line() -> None:
@@ -339,11 +343,11 @@ def test_settings_that_do_not_fit_the_matrix_fail_in_one_line() -> None:
     assert wb.status == "failed"
     assert wb.error
     assert "\n" not in wb.error
-    assert wb.error[:20] in wb._form.error.value
+    assert wb.error[:20] in wb._page.form.error.value
     wb.form = "auto"
     wb.start()
     wb.wait(PATIENCE)
-    assert (wb.status, wb.error, wb._form.error.value) == ("finished", "", "")
+    assert (wb.status, wb.error, wb._page.form.error.value) == ("finished", "", "")
     wb.close()
 
 

@@ -168,10 +168,14 @@ class RunForm:
 class FindingList:
     """Findings as sentences, the most useful first; evidence is folded, remedies are buttons."""
 
-    def __init__(self, try_remedy: Callable[[Finding], None]) -> None:
-        self._try = try_remedy
+    def __init__(self) -> None:
+        self._try: Callable[[Finding], None] | None = None
         self.widget = w.VBox()
         self.say("Findings appear here after a run.")
+
+    def on_try(self, handler: Callable[[Finding], None]) -> None:
+        """Call ``handler`` with a finding when the button of its remedy is pressed."""
+        self._try = handler
 
     def say(self, text: str) -> None:
         """A single quiet line instead of findings."""
@@ -184,13 +188,13 @@ class FindingList:
         for finding in diagnosis.findings:
             items.append(w.HTML(_finding_html(finding)))
             remedy = finding.remedy
-            if remedy is not None:
+            if remedy is not None and self._try is not None:
                 button = w.Button(
                     description="Try " + _remedy_text(remedy),
                     tooltip=remedy.text,
                     layout=w.Layout(width="auto", max_width="100%"),
                 )
-                button.on_click(lambda _, finding=finding: self._try(finding))
+                button.on_click(lambda _, finding=finding, handler=self._try: handler(finding))
                 items.append(w.HBox([button]))
         if diagnosis.findings:
             self._replace(items)

@@ -452,7 +452,7 @@ def iterate(
     tol : float, optional
         Absolute level, in working units of H, that replaces rounding level in the deflation test.
     exceptional : bool or int, optional
-        Exceptional shifts after so many sweeps without a deflation (True: 10, for multishift 6; False or 0: never).
+        Exceptional shifts after so many sweeps without a deflation (True: 10; False or 0: never).
         None: on for all strategies but zero and given.
     accumulate : bool
         Whether Z is formed; factors need it.
@@ -572,11 +572,10 @@ def _resolve(
         raise SettingsError(f"tol {tol!r} is no level; give a number of at least 0, or None for rounding level")
     if limit is not None and (isinstance(limit, bool) or not isinstance(limit, (int, np.integer)) or limit < 1):
         raise SettingsError(f"limit {limit!r} is no number of sweeps; give an integer of at least 1")
-    patience = int(getattr(policy, "patience", EXCEPTIONAL_PERIOD))
     if exceptional is None:
-        period = patience if getattr(policy, "exceptional", True) else 0
+        period = EXCEPTIONAL_PERIOD if getattr(policy, "exceptional", True) else 0
     elif isinstance(exceptional, bool):
-        period = patience if exceptional else 0
+        period = EXCEPTIONAL_PERIOD if exceptional else 0
     elif isinstance(exceptional, (int, np.integer)) and exceptional >= 0:
         period = int(exceptional)
     else:

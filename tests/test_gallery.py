@@ -84,6 +84,15 @@ def test_lapack_types_large(n: int, complex_: bool) -> None:
                 check(run, must_converge=strategy in SOUND)
 
 
+@pytest.mark.slow
+@pytest.mark.parametrize("complex_", [False, True], ids=["real", "complex"])
+def test_lapack_types_with_deflation_windows(complex_: bool) -> None:
+    """Large enough for many shifts a sweep."""
+    for name, a in lapack_types(170, complex_):
+        for balance in ("permute", "both"):
+            check(sb.iterate(sb.load(a, name=name), "multishift", balance=balance), must_converge=True)
+
+
 FRANK_12 = [  # Golub & Wilkinson, SIAM Review 18 (1976); Wilkinson, The Algebraic Eigenvalue Problem (1965)
     32.2288915, 20.1989886, 12.3110774, 6.96153309, 3.51185595, 1.55398871,
     0.643505319, 0.284749721, 0.143646520, 0.0812276592, 0.0495074292, 0.0310280606,

@@ -9,7 +9,7 @@ import numpy as np
 
 from schurbench.diagnosis.finding import Finding, RemedyResult, SettingsRemedy, SolverRemedy, ratio_text
 from schurbench.measures import residual_ratio
-from schurbench.policy import EXCEPTIONAL_PERIOD, STRATEGIES, Multishift, strategy_for
+from schurbench.policy import EXCEPTIONAL_PERIOD, STRATEGIES, strategy_for
 from schurbench.prepare.plain import number, plural
 
 if TYPE_CHECKING:
@@ -41,8 +41,7 @@ def change(case: Case, text: str, **changes: Any) -> SettingsRemedy:
         if before.strategy == "given":
             keywords["shifts"] = [complex(*pair) if pair[1] else pair[0] for pair in before.options["shifts"]]
         pure = before.strategy in ("zero", "given")
-        usual_period = Multishift.patience if before.strategy == Multishift.name else EXCEPTIONAL_PERIOD
-        if before.exceptional != (0 if pure else usual_period):
+        if before.exceptional != (0 if pure else EXCEPTIONAL_PERIOD):
             keywords["exceptional"] = before.exceptional
         if before.strategy == getattr(automatic, "name", "") and "strategy" not in changes:
             keywords["strategy"] = "auto"

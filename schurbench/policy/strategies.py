@@ -4,9 +4,8 @@ A strategy of one's own is any object with a ``shifts(view)`` method that return
 step), two (a double-shift sweep) or more (taken two by two), in the working units of H. In real form one shift must be
 real, and every two must both be real or conjugate. Optional attributes: ``name`` (shown in results), ``form`` (``"real"``
 or ``"complex"``, what ``form="auto"`` means for a real matrix), ``exceptional`` (False to stay pure unless the caller
-asks otherwise), ``patience`` (sweeps without a deflation before an exceptional shift), and a method
-``deflation_window(view)`` that returns how many rows of a deflation window to look into now, or 0 to sweep; what the
-window leaves is in ``view.handed_on`` then.
+asks otherwise), and a method ``deflation_window(view)`` that returns how many rows of a deflation window to look into now,
+or 0 to sweep; what the window leaves is in ``view.handed_on`` then.
 """
 
 from __future__ import annotations

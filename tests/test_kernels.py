@@ -8,7 +8,7 @@ import scipy.linalg
 
 from schurbench.kernels import Workspace, bands, join, scan, split, sweep
 from schurbench.kernels.blocks import standardise_pair
-from schurbench.kernels.rotations import make_reflector, make_rotation
+from schurbench.kernels.rotations import make_reflector, make_rotation, make_rotation_complex
 from schurbench.measures import ULP
 from tests.gallery import matched_distance
 
@@ -98,7 +98,7 @@ def test_double_shift_sweep_equals_two_explicit_steps(n: int, lo: int, hi: int, 
     ],
 )
 def test_rotation_annihilates(f: complex, g: complex) -> None:
-    c, s, r = make_rotation(f, g, 1, 0)
+    c, s, r = (make_rotation_complex if isinstance(f, complex) else make_rotation)(f, g, 1, 0)
     scale = max(abs(f), abs(g))
     assert abs(c * c + abs(s) ** 2 - 1.0) < 4 * ULP
     assert abs(-np.conj(s) * f + c * g) <= 4 * ULP * scale

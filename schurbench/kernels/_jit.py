@@ -9,9 +9,8 @@ from pathlib import Path
 from typing import Any, TypeVar
 
 import numba
-import numba.extending
 
-__all__ = ["compiled", "exact", "inlined", "overloaded_by_type"]
+__all__ = ["compiled", "exact", "inlined"]
 
 F = TypeVar("F", bound=Callable[..., Any])
 
@@ -59,18 +58,3 @@ def inlined(function: F) -> F:
 def exact(function: F) -> F:
     """Compile without fused instructions, for the few lines whose rounding errors must be exactly those written."""
     return numba.njit(nogil=True, error_model="numpy")(function)
-
-
-def overloaded_by_type(for_real: F, for_complex: F) -> Callable[[F], F]:
-    """Let kernels call one name for (float, scalar, float) arguments and get the version for the scalar's type."""
-
-    def decorate(function: F) -> F:
-        @numba.extending.overload(function, jit_options=_OPTIONS)
-        def choose(c, s, turn):  # type: ignore[no-untyped-def]  # numba passes types, not values
-            if isinstance(s, numba.types.Complex):
-                return lambda c, s, turn: for_complex(c, s, turn)
-            return lambda c, s, turn: for_real(c, s, turn)
-
-        return function
-
-    return decorate

@@ -16,13 +16,12 @@ from __future__ import annotations
 
 import math
 
-import numpy as np
-
-from schurbench.kernels._jit import compiled, exact, inlined, overloaded_by_type
+from schurbench.kernels._jit import compiled, exact, inlined
 
 __all__ = [
     "make_reflector",
     "make_rotation",
+    "make_rotation_complex",
     "reflect_right",
     "reflect_rows",
     "reflect_rows_twice",
@@ -36,7 +35,6 @@ __all__ = [
 # Below this an entry has lost digits to underflow: its phase and its ratios to others mean nothing, and dropping it changes
 # the matrix by less than the rounding of any normal entry.
 TINY = 2.0**-970
-
 
 # A rotation by very nearly 90° with a cosine this small would change the other row by less than its rounding, so that the
 # change is lost entry by entry, always the same way: 3600 sweeps on a skew matrix of n = 120 gave a ratio of 30. With the
@@ -101,50 +99,47 @@ def _rounded_in_turn(x, delta, turn, spacing):
 
 
 @compiled
-def _unit_real(c, s, turn):
-    """Bring c² + s² to 1 on the average over many sweeps."""
-    pa, ea = _square(c)
-    pb, eb = _square(s)
-    f = 0.5 * (((max(pa, pb) - 1.0) + min(pa, pb)) + (ea + eb))
-    if pa >= pb:
-        return _rounded_in_turn(c, -f / c, turn, BELOW_ONE), s
-    return c, _rounded_in_turn(s, -f / s, turn, BELOW_ONE)
-
-
-@compiled
-def _unit_complex(c, s, turn):
-    """Bring c² + |s|² to 1 on the average over many sweeps."""
-    pa, ea = _square(c)
-    pb, eb = _square(s.real)
-    pc, ec = _square(s.imag)
-    f = 0.5 * (((pa - 1.0) + max(pb, pc)) + min(pb, pc) + (ea + (eb + ec)))
-    if pa >= 0.3:
-        return _rounded_in_turn(c, -f / c, turn, BELOW_ONE), s
-    if pb >= pc:
-        return c, complex(_rounded_in_turn(s.real, -f / s.real, turn, BELOW_ONE), s.imag)
-    return c, complex(s.real, _rounded_in_turn(s.imag, -f / s.imag, turn, BELOW_ONE))
-
-
-@overloaded_by_type(_unit_real, _unit_complex)
-def _unit(c, s, turn):
-    """The one of the two that fits the type of s."""
-
-
-@compiled
 def make_rotation(f, g, salt, k):
-    """Rotation that turns (f, g) into (r, 0): returns c (real), s, r. Safe against over- and underflow of squares."""
-    ag = abs(g)
+    """Rotation that turns the real (f, g) into (r, 0): returns c, s, r. Safe against over- and underflow of squares."""
+    af, ag = abs(f), abs(g)
     if ag < TINY:
-        return 1.0, g * 0.0, f
-    af = abs(f)
-    turn = _turn(salt, k)
+        return 1.0, 0.0, f
     if af < NEGLIGIBLE * ag:
-        c, s = _unit(0.0, np.conj(g) / ag, turn)
-        return c, s, f * 0.0 + ag
-    norm = math.hypot(af, ag)
-    phase = f / af
-    c, s = _unit(af / norm, phase * (np.conj(g) / norm), turn)
-    return c, s, phase * norm
+        return 0.0, math.copysign(1.0, g), ag
+    norm = math.hypot(f, g)
+    r = math.copysign(norm, f)
+    c, s = af / norm, g / r
+    # bring c² + s² to 1 on the average over many sweeps
+    pc, ec = _square(c)
+    ps, es = _square(s)
+    excess = 0.5 * (((max(pc, ps) - 1.0) + min(pc, ps)) + (ec + es))
+    if pc >= ps:
+        return _rounded_in_turn(c, -excess / c, _turn(salt, k), BELOW_ONE), s, r
+    return c, _rounded_in_turn(s, -excess / s, _turn(salt, k), BELOW_ONE), r
+
+
+@compiled
+def make_rotation_complex(f, g, salt, k):
+    """The same for complex f and g: c is real, s and r are complex."""
+    af, ag = abs(f), abs(g)
+    if ag < TINY:
+        return 1.0, complex(0.0, 0.0), f
+    if af < NEGLIGIBLE * ag:
+        c, s, r = 0.0, g.conjugate() / ag, complex(ag, 0.0)
+    else:
+        norm = math.hypot(af, ag)
+        phase = f / af
+        c, s, r = af / norm, phase * (g.conjugate() / norm), phase * norm
+    pc, ec = _square(c)
+    pr, er = _square(s.real)
+    pi, ei = _square(s.imag)
+    excess = 0.5 * (((pc - 1.0) + max(pr, pi)) + min(pr, pi) + (ec + (er + ei)))
+    turn = _turn(salt, k)
+    if pc >= 0.3:
+        return _rounded_in_turn(c, -excess / c, turn, BELOW_ONE), s, r
+    if pr >= pi:
+        return c, complex(_rounded_in_turn(s.real, -excess / s.real, turn, BELOW_ONE), s.imag), r
+    return c, complex(s.real, _rounded_in_turn(s.imag, -excess / s.imag, turn, BELOW_ONE)), r
 
 
 @compiled

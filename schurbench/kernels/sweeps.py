@@ -15,6 +15,7 @@ from schurbench.kernels.rest import reflect_rest, rotate_rest, rotate_rest_compl
 from schurbench.kernels.rotations import (
     make_reflector,
     make_rotation,
+    make_rotation_complex,
     reflect_right,
     reflect_rows,
     rotate_right,
@@ -85,7 +86,7 @@ def _single_shift_step_complex(H, lo, hi, shift, C, S, salt):
     for k in range(lo, hi - 1):
         f = complex(Hr[k, k], Hi[k, k])
         g = complex(Hr[k + 1, k], Hi[k + 1, k])
-        c, s, r = make_rotation(f, g, salt, k)
+        c, s, r = make_rotation_complex(f, g, salt, k)
         C[k] = c
         S[0, k], S[1, k] = s.real, s.imag
         Hr[k, k], Hi[k, k] = r.real, r.imag

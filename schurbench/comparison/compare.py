@@ -30,8 +30,8 @@ __all__ = [
     "need_pandas",
 ]
 
-#: Compared when nothing is named: every strategy meant for practice. ``zero`` is a teaching case whose sweeps on a
-#: matrix of any size run into the limit, ``given`` needs shifts, ``auto`` is one of the others.
+#: Compared when nothing is named: one strategy of each kind of shift. ``zero`` hardly ever ends before the limit, ``given``
+#: needs shifts, ``multishift`` differs from the first two on large matrices only, ``auto`` is one of the others.
 DEFAULT_ENTRIES = ("francis", "wilkinson", "rayleigh")
 
 #: Seconds closer than this share of the fastest, or than this many, are one and the same: repeated runs of one setting

@@ -145,6 +145,25 @@ def test_unshifted_rates_of_the_toeplitz_tridiagonal_are_those_of_its_closed_for
     assert finding.evidence["measured_decay_per_sweep"] == pytest.approx(ratios[n - 1 - row], rel=0.02)
 
 
+@pytest.mark.parametrize("strategy", ["francis", "multishift"])
+def test_regulator_loop_iterates_slowly_because_it_is_poorly_scaled(strategy: str) -> None:
+    # tests/data/README.md: CAREX 20. Windows of a few rows have a norm hundreds of times their eigenvalues.
+    run = sb.iterate(sb.load(DATA / "closedloop_carex20.npz"), strategy)
+    assert run.waits.max() > 50
+    finding = sb.diagnose(run, try_remedies=True).findings[0]
+    assert (finding.cause, finding.rank) == ("poor-scaling", Rank.ITERATION)
+    H = run.state(len(run.steps)).H
+    lo, hi = finding.rows[0], finding.rows[-1] + 1
+    assert set(finding.rows) <= set(range(lo, hi))
+    worst = max(run.steps, key=lambda step: run.waits[step.index - 1])
+    block = H[slice(*worst.window), slice(*worst.window)]
+    ratio = np.linalg.norm(block) / np.abs(np.linalg.eigvals(block)).max()
+    assert finding.evidence["window_norm_over_largest_eigenvalue"] == pytest.approx(ratio, rel=1e-3)
+    assert finding.remedy.settings["balance"] == "both"
+    assert finding.remedy.result.helped
+    assert finding.remedy.run().sweeps < run.sweeps / 3
+
+
 def test_kinetics_jacobian_is_poorly_scaled_and_balancing_finds_certified_eigenvalues() -> None:
     # tests/data/README.md: Jacobian from cantera; eigenvalues certified from the exact characteristic polynomial.
     certified = json.loads((DATA / "certified" / "kinetics_gri30.json").read_text())

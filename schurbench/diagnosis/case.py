@@ -224,6 +224,11 @@ class Case:
         return self.run.stop.reason is not StopReason.CONVERGED
 
     @cached_property
+    def final(self) -> npt.NDArray[Any]:
+        """H after the last step."""
+        return self.run.state(len(self.run.steps)).H
+
+    @cached_property
     def eigenvalues(self) -> Complex:
         """Eigenvalues of H in row order, in working units.
 
@@ -232,11 +237,10 @@ class Case:
         """
         import scipy.linalg
 
-        last = len(self.run.steps)
-        values = self.run.ritz(last)
+        values = self.run.ritz(len(self.run.steps))
         if self.run.converged:
             return values
-        H = self.run.state(last).H
+        H = self.final
         cuts = np.flatnonzero(np.diagonal(H, -1) == 0.0) + 1
         edges = [0, *(int(c) for c in cuts), self.run.n]
         cost = _EIGENVALUES_COST[self.run.settings.form]
@@ -262,7 +266,7 @@ class Case:
 
         if not self.run.converged or not self._fits(_CONDITIONS_COST, self.run.n):
             return None
-        final = self.run.state(len(self.run.steps)).H
+        final = self.final
         # Entries under rounding level are not known; left in, they would make multiple eigenvalues of a normal matrix
         # look defective, because there such an entry stands over a difference that is as small.
         final = np.where(np.abs(final) > ULP * self.run.norm, final, np.diag(np.diagonal(final)))

@@ -17,6 +17,7 @@ from schurbench.diagnosis.causes.non_normal import NonNormal
 from schurbench.diagnosis.causes.poor_scaling import PoorScaling
 from schurbench.diagnosis.causes.real_shift_on_pair import RealShiftOnPair
 from schurbench.diagnosis.causes.reducible import Reducible
+from schurbench.diagnosis.causes.scaled_window import ScaledWindow
 from schurbench.diagnosis.causes.slow_ratio import SlowRatio
 from schurbench.diagnosis.causes.stopped_early import StoppedEarly
 from schurbench.diagnosis.causes.structure_unused import StructureUnused
@@ -24,7 +25,13 @@ from schurbench.diagnosis.causes.unexplained import unexplained
 
 __all__ = ["RUN_CAUSES", "STRETCH_CAUSES", "Judgement", "RunCause", "StretchCause", "unexplained"]
 
-STRETCH_CAUSES: tuple[StretchCause, ...] = (RealShiftOnPair(), EqualModuli(), Clustered(), SlowRatio())
+STRETCH_CAUSES: tuple[StretchCause, ...] = (
+    RealShiftOnPair(),
+    EqualModuli(),
+    Clustered(),
+    SlowRatio(),
+    ScaledWindow(),
+)
 
 RUN_CAUSES: tuple[RunCause, ...] = (
     StoppedEarly(),

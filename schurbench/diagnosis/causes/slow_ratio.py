@@ -104,15 +104,15 @@ def _disagreement(decay: Decay) -> float:
 
 def _remedy(case: Case, kept: bool = False) -> SettingsRemedy:
     settings = case.run.settings
-    adaptive = "francis" if settings.form == "real" else "wilkinson"
-    if kept and settings.strategy == adaptive and settings.deflation != "norm":
+    adaptive = settings.strategy in ("francis", "wilkinson", "multishift")
+    if kept and adaptive and settings.deflation != "norm":
         return change(
             case,
             "Judge entries by the norm of H (deflation test 'norm'); where the small diagonal entries matter, compare the "
             "small eigenvalues of both runs.",
             deflation="norm",
         )
-    if settings.strategy != adaptive:
+    if not adaptive:
         return change(
             case,
             "Use shifts that follow the eigenvalues, so that convergence turns quadratic (strategy 'auto').",
@@ -124,5 +124,5 @@ def _remedy(case: Case, kept: bool = False) -> SettingsRemedy:
             f"Allow an exceptional shift after {EXCEPTIONAL_PERIOD} sweeps without a deflation.",
             exceptional=EXCEPTIONAL_PERIOD,
         )
-    other = "wilkinson" if adaptive == "francis" else "francis"
+    other = "wilkinson" if settings.form == "real" else "francis"
     return change(case, f"Try the other family of shifts (strategy {other!r}).", strategy=other)

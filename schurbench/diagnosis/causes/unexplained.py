@@ -5,6 +5,7 @@ from __future__ import annotations
 from schurbench.diagnosis.case import Case
 from schurbench.diagnosis.finding import Finding
 from schurbench.diagnosis.remedies import change
+from schurbench.policy import strategy_for
 from schurbench.prepare.plain import number, plural
 
 __all__ = ["unexplained"]
@@ -18,8 +19,9 @@ def unexplained(case: Case, confidence: float = 0.3) -> Finding:
         f"{number(rate)} sweeps an eigenvalue" if case.deflated else f"{run.sweeps} sweeps without an eigenvalue"
     )
     stretches = case.troubled
-    adaptive = "francis" if run.settings.form == "real" else "wilkinson"
-    other = "auto" if run.settings.strategy != adaptive else "wilkinson" if adaptive == "francis" else "francis"
+    real = run.settings.form == "real"
+    automatic = strategy_for("auto", n=run.n, real=real)
+    other = "auto" if run.settings.strategy != getattr(automatic, "name", "") else "wilkinson" if real else "francis"
     return Finding(
         cause="unexplained",
         statement=(

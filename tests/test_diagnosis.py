@@ -153,8 +153,6 @@ def test_regulator_loop_iterates_slowly_because_it_is_poorly_scaled(strategy: st
     finding = sb.diagnose(run, try_remedies=True).findings[0]
     assert (finding.cause, finding.rank) == ("poor-scaling", Rank.ITERATION)
     H = run.state(len(run.steps)).H
-    lo, hi = finding.rows[0], finding.rows[-1] + 1
-    assert set(finding.rows) <= set(range(lo, hi))
     worst = max(run.steps, key=lambda step: run.waits[step.index - 1])
     block = H[slice(*worst.window), slice(*worst.window)]
     ratio = np.linalg.norm(block) / np.abs(np.linalg.eigvals(block)).max()

@@ -481,16 +481,20 @@ def test_open_hands_the_file_on(
 
     calls: list[tuple[object, ...]] = []
 
-    def served(file: Path | None, *, key: str | None, page: bool, browser: bool) -> int:
-        calls.append((file, key, page, browser))
+    def served(file: Path | None, *, key: str | None, labels: Path | None, page: bool, browser: bool) -> int:
+        calls.append((file, key, labels, page, browser))
         return 0
 
     monkeypatch.setattr(serve, "open_workbench", served)
     file = data / "west0067.mtx"
     assert main(["open"]) == 0
     assert main(["open", str(file), "--page", "--no-browser"]) == 0
-    assert main(["open", str(file), "--key", "A"]) == 0
-    assert calls == [(None, None, False, True), (file, None, True, False), (file, "A", False, True)]
+    assert main(["open", str(file), "--key", "A", "--labels", "states.txt"]) == 0
+    assert calls == [
+        (None, None, None, False, True),
+        (file, None, None, True, False),
+        (file, "A", Path("states.txt"), False, True),
+    ]
 
 
 @pytest.mark.parametrize("page", [False, True])

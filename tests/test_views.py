@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 import json
+import re
 import struct
 import zlib
 from pathlib import Path
@@ -210,6 +211,54 @@ def test_moving_and_converged_values_are_all_values(demo: sb.Run) -> None:
         assert view.chosen.shape == (1, 2)
 
 
+# --- steps that look into a deflation window -----------------------------------------------------------------------
+
+
+@pytest.fixture(scope="module")
+def many() -> sb.Run:
+    return sb.iterate(np.random.default_rng(27).standard_normal((120, 120)), strategy="multishift")
+
+
+def test_a_deflation_window_is_outlined_where_it_was_and_nowhere_else(many: sb.Run) -> None:
+    for step in many.steps:
+        view = views.matrix_view(many, step.index)
+        if step.rows:
+            assert view.looked_into == (step.window[1] - step.rows, step.window[1])
+            assert step.window[0] <= view.looked_into[0]
+        else:
+            assert view.looked_into == (0, 0)
+    assert views.matrix_view(many, 0).looked_into == (0, 0)
+
+
+def test_the_track_marks_steps_without_a_sweep_and_counts_sweeps_only(many: sb.Run) -> None:
+    track = views.track_view(many)
+    assert set(track.windows) == {float(step.index) for step in many.steps if step.rows}
+    assert len(track.height) == len(many.steps)
+    for step in many.steps:
+        if step.rows and step.index > 1:
+            before = many.steps[step.index - 2]
+            assert track.height[step.index - 1] == (0.0 if before.deflations else track.height[step.index - 2])
+    assert views.track_view(sb.iterate(np.diag([1.0, 2.0, 3.0]))).windows.size == 0
+
+
+def test_a_deflation_window_is_told_in_numbers(many: sb.Run) -> None:
+    found = 0
+    for step in many.steps:
+        said = views.track_sentence(many, step.index)
+        assert ("looked into a deflation window" in said) == bool(step.rows)
+        if not step.rows:
+            continue
+        told = re.search(r"of (\d+) rows?: (\w+)(?: eigenvalues?)? deflated, (\w+) handed on as shifts\.$", said)
+        assert told, said
+        size, out, handed = (0 if word == "none" else int(word) for word in told.groups())
+        # every row of the window either left with an eigenvalue or was handed on (Braman, Byers and Mathias, SIAM J.
+        # Matrix Anal. Appl. 23, 2002, 948-973, section 2)
+        assert size == out + handed == step.rows
+        assert handed == len(step.handed_on) == len(views.spectrum_view(many, step.index).shifts)
+        found += out
+    assert 0 < found <= many.n
+
+
 # --- words --------------------------------------------------------------------------------------------------------
 
 
@@ -251,6 +300,17 @@ def test_the_smallest_matrices_have_every_view(n: int) -> None:
     views.track_view(run)
     assert len(views.spectrum_view(run, last, 0).converged) == n
     assert views.subdiagonal_sentence(run, last, n - 1).endswith(".")
+
+
+def test_shifts_are_named_by_the_first_and_counted() -> None:
+    for shifts, text in (
+        ([1.5], "1.5"),
+        ([1.5, 2.5], "1.5 and 2.5"),
+        ([1 - 2j, 1 + 2j], "1 ± 2i"),
+        ([1 + 2j, 1 - 2j, 3.0, 4.0], "1 ± 2i and 2 more"),
+        ([1.0, 2.0, 3.0], "1, 2 and 1 more"),
+    ):
+        assert views._shifts_text(np.array(shifts, dtype=complex)) == text
 
 
 def test_numbers_are_written_as_people_read_them() -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import ast
 import json
 import os
 import signal
@@ -403,14 +404,14 @@ def test_notebooks_run_from_top_to_bottom(path: Path, tmp_path: Path) -> None:
     "name", ["plant.mat", 'it\'s "A".npy', "new\nline.npy", "'); import os; ('.npy", "Böschung.csv"]
 )
 def test_any_file_name_is_a_literal_in_the_notebook(name: str) -> None:
-    notebook = serve.workbench_notebook(Path("/data") / name, key='K"\\')
+    notebook = serve.workbench_notebook(Path("/data") / name, key='K"\\', labels=Path("/data") / f"{name}.txt")
     source = "".join(notebook["cells"][1]["source"])
     called: list[object] = []
 
     class Fake:
         @staticmethod
-        def load(path: str, key: str | None = None) -> None:
-            called.extend([path, key])
+        def load(path: str, key: str | None = None, labels: str | None = None) -> None:
+            called.extend([path, key, labels])
 
         @staticmethod
         def Workbench(matrix: object) -> None:
@@ -418,7 +419,7 @@ def test_any_file_name_is_a_literal_in_the_notebook(name: str) -> None:
 
     lines = [line for line in source.splitlines() if not line.startswith("import ")]
     exec("\n".join(lines), {"sb": Fake})
-    assert called == [f"/data/{name}", 'K"\\', None]
+    assert called == [f"/data/{name}", 'K"\\', f"/data/{name}.txt", None]
 
 
 def test_notebooks_are_never_overwritten(tmp_path: Path) -> None:
@@ -445,7 +446,23 @@ def test_the_server_listens_here_only_and_takes_large_uploads(tmp_path: Path) ->
     assert (tmp_path / "settings" / "labconfig" / "page_config.json").exists()
 
 
+def test_a_plain_page_listens_here_only_and_may_load_nothing_from_outside(tmp_path: Path) -> None:
+    command = serve.page_command(tmp_path / "a b.ipynb", browser=False)
+    assert str(tmp_path / "a b.ipynb") in command
+    assert "--Voila.ip=127.0.0.1" in command
+    assert "--Voila.auto_token=True" in command
+    settings = ast.literal_eval(next(part for part in command if "tornado_settings" in part).split("=", 1)[1])
+    assert settings["websocket_max_message_size"] == serve.MESSAGE_LIMIT
+    # W3C Content Security Policy level 3, section 6.1.3: default-src stands in for every kind of source not named
+    sources = settings["headers"]["Content-Security-Policy"].split(";")[0].split()
+    assert sources[0] == "default-src"
+    assert set(sources[1:]) <= {"'self'", "'unsafe-inline'", "'unsafe-eval'", "data:", "blob:"}
+
+
 def test_open_refuses_what_it_cannot_show(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    for belongings in ({"key": "A"}, {"labels": tmp_path / "states.txt"}):
+        with pytest.raises(sb.InputError, match="no matrix file"):
+            serve.open_workbench(**belongings)
     bad = tmp_path / "bad.npy"
     np.save(bad, np.ones((2, 3)))
     with pytest.raises(sb.InputError):

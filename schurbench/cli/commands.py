@@ -239,7 +239,9 @@ def open_workbench(args: argparse.Namespace, console: Console) -> int:
     """JupyterLab with the workbench."""
     from schurbench.panels import serve
 
-    code: int = serve.open_workbench(args.file, key=args.key, page=args.page, browser=not args.no_browser)
+    code: int = serve.open_workbench(
+        args.file, key=args.key, labels=args.labels, page=args.page, browser=not args.no_browser
+    )
     return code
 
 

@@ -118,8 +118,9 @@ def build_parser() -> argparse.ArgumentParser:
 
     add("warm", json)
 
-    workbench = add("open", _positional("FILE", "matrix file; without it, the demonstration plant", optional=True))
-    workbench.add_argument("--key", metavar="NAME", help="which array, where the file holds several")
+    workbench = add(
+        "open", _positional("FILE", "matrix file; without it, the demonstration plant", optional=True), source
+    )
     workbench.add_argument("--page", action="store_true", help="a plain page without notebook cells")
     workbench.add_argument("--no-browser", action="store_true", help="only print the address")
 

@@ -13,7 +13,6 @@ from typing import Any
 import bqplot
 import ipywidgets
 import numpy as np
-import numpy.typing as npt
 
 from schurbench.panels.colours import (
     ACTIVE,
@@ -27,6 +26,7 @@ from schurbench.panels.colours import (
     gradient,
     picture_png,
 )
+from schurbench.panels.glyphs import NOTHING, Polyline, crosses, diamonds, dots, squares, strokes
 from schurbench.panels.text import power
 from schurbench.panels.views import (
     CurvesView,
@@ -39,12 +39,10 @@ from schurbench.panels.views import (
 )
 from schurbench.prepare.plain import number
 
-__all__ = ["DeflationFigure", "MatrixFigure", "SpectrumFigure", "SubdiagonalFigure", "TrackFigure"]
-
-Floats = npt.NDArray[np.float64]
+__all__ = ["DeflationFigure", "MatrixFigure", "SpectrumFigure", "SubdiagonalFigure", "TrackFigure", "scale_html"]
 
 _EMPTY_PICTURE = picture_png(np.full((1, 1), -np.inf), (0.0, 1.0))
-_NOTHING = np.array([np.nan])
+_GROUND = "#222222"
 _MARGIN = {"top": 8, "bottom": 34, "left": 52, "right": 14}
 
 
@@ -52,54 +50,39 @@ def _picture() -> Any:
     return ipywidgets.Image(value=_EMPTY_PICTURE, format="png")
 
 
-def _axis(scale: Any, label: str, side: str = "bottom", **options: Any) -> Any:
-    vertical = side == "left"
-    return bqplot.Axis(
-        scale=scale,
-        label=label,
-        side=side,
-        orientation="vertical" if vertical else "horizontal",
-        grid_lines="none",
-        visible=False,  # until there is a range to show
-        label_offset="38px" if vertical else "28px",
-        **options,
-    )
-
-
-def _crosses(points: Floats, half_x: float, half_y: float) -> tuple[Floats, Floats]:
-    """One path of upright crosses: two strokes a point, parted by NaN."""
-    x, y = points[:, 0], points[:, 1]
-    gap = np.full(len(points), np.nan)
-    xs = np.stack([x - half_x, x + half_x, gap, x, x, gap], axis=1).ravel()
-    ys = np.stack([y, y, gap, y - half_y, y + half_y, gap], axis=1).ravel()
-    return (xs, ys) if len(points) else (_NOTHING, _NOTHING)
-
-
-def _dots(points: Floats) -> tuple[Floats, Floats]:
-    """One path of strokes without length; the square caps of the style sheet make them squares of the stroke width."""
-    x, y = points[:, 0], points[:, 1]
-    gap = np.full(len(points), np.nan)
-    xs = np.stack([x, x, gap], axis=1).ravel()
-    ys = np.stack([y, y, gap], axis=1).ravel()
-    return (xs, ys) if len(points) else (_NOTHING, _NOTHING)
-
-
-def _draw(mark: Any, xy: tuple[Floats, Floats]) -> None:
+def _draw(mark: Any, path: Polyline) -> None:
     """Both coordinates in one message, so that the page never pairs a new x with an old y."""
     with mark.hold_sync():
-        mark.x, mark.y = xy
+        mark.x, mark.y = path
 
 
 class _Figure:
-    """A figure with its two scales, a click surface over it, and a fixed place on the page."""
+    """A figure with its scales and axes, the lines of the cursor and the chosen row, and a click surface over it."""
 
-    def __init__(self, marks: list[Any], x: Any, y: Any, axes: list[Any], height: str, margin: dict[str, int]) -> None:
-        self.x, self.y = x, y
-        self._surface = bqplot.Image(image=_picture(), scales={"x": x, "y": y}, x=[0.0, 1.0], y=[0.0, 1.0])
+    def __init__(
+        self, height: str, across: str, down: str, *, reverse: bool = False, margin: dict[str, int] | None = None
+    ) -> None:
+        self.x, self.y = bqplot.LinearScale(min=0, max=1), bqplot.LinearScale(min=0, max=1, reverse=reverse)
+        self._scales = {"x": self.x, "y": self.y}
+        self._axes = [
+            bqplot.Axis(
+                scale=scale,
+                label=label,
+                side=side,
+                orientation="horizontal" if side == "bottom" else "vertical",
+                grid_lines="none",
+                visible=False,  # until there is a range to show
+                label_offset="28px" if side == "bottom" else "38px",
+            )
+            for scale, label, side in ((self.x, across, "bottom"), (self.y, down, "left"))
+            if label
+        ]
+        self._cursor = self._lines(CHOSEN, 2)
+        self._row = self._lines(CHOSEN, 1.5)
+        self._surface = bqplot.Image(image=_picture(), scales=self._scales, x=[0.0, 1.0], y=[0.0, 1.0])
         self.widget = bqplot.Figure(
-            marks=[*marks, self._surface],
-            axes=axes,
-            fig_margin=margin,
+            axes=self._axes,
+            fig_margin=margin or _MARGIN,
             padding_x=0.0,
             padding_y=0.0,
             animation_duration=0,
@@ -117,6 +100,25 @@ class _Figure:
 
         self._surface.on_element_click(clicked)
 
+    def move(self, cursor: int) -> None:
+        """Put the line of the cursor at a step."""
+        _draw(self._cursor, (np.full(2, float(cursor)), np.array([self.y.min, self.y.max])))
+
+    def choose(self, row: int) -> None:
+        """Put the line of the chosen row."""
+        _draw(self._row, (np.array([self.x.min, self.x.max]), np.full(2, float(row))))
+
+    def _lines(self, colour: str, width: float, *, style: str = "solid", fill: float = 0.0) -> Any:
+        """A path that draws nothing yet; ``fill`` is the opacity of what it encloses."""
+        enclosed = {"fill": "inside", "fill_colors": [colour], "fill_opacities": [fill]} if fill else {}
+        return bqplot.Lines(
+            x=NOTHING, y=NOTHING, scales=self._scales, colors=[colour], stroke_width=width, line_style=style, **enclosed
+        )
+
+    def _stack(self, *marks: Any) -> None:
+        """Lay the marks over each other, the first at the bottom and the click surface on top."""
+        self.widget.marks = [*marks, self._surface]
+
     def _range(self, x: tuple[float, float], y: tuple[float, float]) -> None:
         for axis in self.widget.axes:
             axis.visible = True
@@ -126,13 +128,18 @@ class _Figure:
         with self._surface.hold_sync():
             self._surface.x, self._surface.y = list(x), list(y)
 
+    def _whole_ticks(self, across: tuple[float, float], down: tuple[float, float], most: tuple[int, int]) -> None:
+        """Whole numbers along both axes, which are all rows, columns, steps or decades."""
+        for axis, (lo, hi), count in zip(self._axes, (across, down), most, strict=True):
+            axis.tick_values = [float(t) for t in ticks(lo, hi, count)]
+
 
 class _Swap:
     """An `Image` mark that is redrawn at every new picture. On a reversed axis its last row of pixels is on top."""
 
-    def __init__(self, x: Any, y: Any) -> None:
+    def __init__(self, scales: dict[str, Any]) -> None:
         self._pair = (_picture(), _picture())
-        self.mark = bqplot.Image(image=self._pair[0], scales={"x": x, "y": y}, x=[0.0, 1.0], y=[0.0, 1.0])
+        self.mark = bqplot.Image(image=self._pair[0], scales=scales, x=[0.0, 1.0], y=[0.0, 1.0])
         self._turn = 0
 
     def show(self, png: bytes, x: tuple[float, float], y: tuple[float, float]) -> None:
@@ -144,95 +151,48 @@ class _Swap:
 
 
 class TrackFigure(_Figure):
-    """Sweeps waited, one column a step; the strip under the columns marks deflations and exceptional shifts."""
+    """Sweeps waited, one column a step; the strip below marks deflations, deflation windows and exceptional shifts."""
 
     def __init__(self, height: str) -> None:
-        x, y = bqplot.LinearScale(min=0, max=1), bqplot.LinearScale(min=-1, max=1)
-        scales = {"x": x, "y": y}
-        self._healthy = bqplot.Lines(
-            x=[0.0, 1.0],
-            y=[0.0, 0.0],
-            scales=scales,
-            colors=[HEALTHY],
-            fill="inside",
-            fill_colors=[HEALTHY],
-            fill_opacities=[0.16],
-            stroke_width=0,
-        )
-        self._columns = bqplot.Lines(
-            x=_NOTHING,
-            y=_NOTHING,
-            scales=scales,
-            colors=[MUTED],
-            fill="inside",
-            fill_colors=[MUTED],
-            fill_opacities=[0.75],
-            stroke_width=0.5,
-        )
-        self._deflations = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CONVERGED], stroke_width=1.5)
-        self._exceptional = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[SHIFT], stroke_width=3)
-        self._cursor = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CHOSEN], stroke_width=2)
-        self._axis = _axis(y, "sweeps", "left")
-        super().__init__(
-            [self._healthy, self._columns, self._deflations, self._exceptional, self._cursor],
-            x,
-            y,
-            [self._axis],
-            height,
-            {"top": 4, "bottom": 4, "left": 52, "right": 14},
-        )
-        self._floor = -1.0
+        super().__init__(height, "", "sweeps", margin={"top": 4, "bottom": 4, "left": 52, "right": 14})
+        self._healthy = self._lines(HEALTHY, 0, fill=0.16)
+        self._columns = self._lines(MUTED, 0.5, fill=0.75)
+        self._deflations = self._lines(CONVERGED, 1.5)
+        self._windows = self._lines(ACTIVE, 1.5)
+        self._exceptional = self._lines(SHIFT, 3)
+        self._stack(self._healthy, self._columns, self._deflations, self._windows, self._exceptional, self._cursor)
 
     def show(self, view: TrackView) -> None:
         last = max(1.0, float(view.edges[-1]))
         top = 1.08 * view.top
-        self._floor = -0.42 * top
-        self._range((0.5, last), (self._floor, top))
-        self._axis.tick_values = [float(t) for t in ticks(0, top, 4)]
-        _draw(
-            self._healthy,
-            (
-                np.array([0.5, last, last, 0.5]),
-                np.array([0.0, 0.0, view.healthy, view.healthy]),
-            ),
-        )
-        if len(view.height):
-            xs = np.concatenate([view.edges[:1], np.repeat(view.edges, 2)[1:-1], view.edges[-1:]])
-            ys = np.concatenate([[0.0], np.repeat(view.height, 2), [0.0]])
-            _draw(self._columns, (xs, ys))
-        else:
-            _draw(self._columns, (_NOTHING, _NOTHING))
-        self._ticks(self._deflations, view.deflations, 0.12, 0.44)
-        self._ticks(self._exceptional, view.exceptional, 0.60, 0.92)
+        floor = -0.42 * top
+        self._range((0.5, last), (floor, top))
+        self._axes[0].tick_values = [float(t) for t in ticks(0, top, 4)]
+        _draw(self._healthy, (np.array([0.5, last, last, 0.5]), np.repeat([0.0, view.healthy], 2)))
+        _draw(self._columns, _columns(view))
+        _draw(self._deflations, strokes(view.deflations, 0.12 * floor, 0.44 * floor))
+        _draw(self._windows, strokes(view.windows, 0.60 * floor, 0.76 * floor))
+        _draw(self._exceptional, strokes(view.exceptional, 0.60 * floor, 0.92 * floor))
 
-    def _ticks(self, mark: Any, steps: Floats, start: float, end: float) -> None:
-        if not len(steps):
-            _draw(mark, (_NOTHING, _NOTHING))
-            return
-        gap = np.full(len(steps), np.nan)
-        xs = np.stack([steps, steps, gap], axis=1).ravel()
-        ys = np.tile([start * self._floor, end * self._floor, np.nan], len(steps))
-        _draw(mark, (xs, ys))
 
-    def move(self, cursor: int) -> None:
-        _draw(self._cursor, (np.array([cursor, cursor], dtype=np.float64), np.array([self._floor, self.y.max])))
+def _columns(view: TrackView) -> Polyline:
+    """The outline of all columns side by side, from the ground up and back."""
+    if not len(view.height):
+        return NOTHING, NOTHING
+    xs = np.concatenate([view.edges[:1], np.repeat(view.edges, 2)[1:-1], view.edges[-1:]])
+    return xs, np.concatenate([[0.0], np.repeat(view.height, 2), [0.0]])
 
 
 class MatrixFigure(_Figure):
-    """The picture of H with the active window and the chosen row."""
+    """The picture of H with the active window, the deflation window of the step and the chosen row."""
 
     def __init__(self, height: str) -> None:
-        x, y = bqplot.LinearScale(min=0, max=1), bqplot.LinearScale(min=0, max=1, reverse=True)
-        scales = {"x": x, "y": y}
-        self._swap = _Swap(x, y)
-        # dashes over a dark line, to be seen on every colour of the scale
-        self._ground = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=["#222222"], stroke_width=3.5)
-        self._window = bqplot.Lines(
-            x=_NOTHING, y=_NOTHING, scales=scales, colors=[ACTIVE], stroke_width=2.5, line_style="dashed"
-        )
-        self._row = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CHOSEN], stroke_width=1.5)
-        self._axes = [_axis(x, "column"), _axis(y, "row", "left")]
-        super().__init__([self._swap.mark, self._ground, self._window, self._row], x, y, self._axes, height, _MARGIN)
+        super().__init__(height, "column", "row", reverse=True)
+        self._swap = _Swap(self._scales)
+        # dashes and dots over a dark line, to be seen on every colour of the scale
+        self._window = (self._lines(_GROUND, 3.5), self._lines(ACTIVE, 2.5, style="dashed"))
+        self._looked = (self._lines(_GROUND, 3.5), self._lines(SHIFT, 2.5, style="dotted"))
+        self._stack(self._swap.mark, *self._window, *self._looked, self._row)
         self._n = 0
 
     def show(self, view: MatrixView, limits: tuple[float, float], n: int) -> None:
@@ -240,16 +200,19 @@ class MatrixFigure(_Figure):
         if n != self._n:
             self._n = n
             self._range(extent, extent)
-            for axis in self._axes:
-                axis.tick_values = [float(t) for t in ticks(0, n - 1, 5)]
+            self._whole_ticks((0, n - 1), (0, n - 1), (5, 5))
         self._swap.show(picture_png(view.level[::-1], limits, 256), extent, extent)
-        lo, hi = view.window[0] - 0.5, view.window[1] - 0.5
-        square = (np.array([lo, hi, hi, lo, lo]), np.array([lo, lo, hi, hi, lo])) if hi > lo else (_NOTHING, _NOTHING)
-        _draw(self._ground, square)
-        _draw(self._window, square)
+        for marks, window in ((self._window, view.window), (self._looked, view.looked_into)):
+            for mark in marks:
+                _draw(mark, _outline(window))
 
-    def choose(self, row: int) -> None:
-        _draw(self._row, (np.array([-0.5, self._n - 0.5]), np.array([row, row], dtype=np.float64)))
+
+def _outline(window: tuple[int, int]) -> Polyline:
+    """The square that a half-open window is in H."""
+    lo, hi = window
+    if hi <= lo:
+        return NOTHING, NOTHING
+    return squares(np.full((1, 2), (lo + hi - 1) / 2.0), (hi - lo) / 2.0, (hi - lo) / 2.0)
 
 
 class SubdiagonalFigure:
@@ -265,96 +228,56 @@ class SubdiagonalFigure:
         """Swap the picture for the curves, or back; both keep their state."""
         self.widget.children = [self.curves.widget if curves else self.picture.widget]
 
-    def move(self, cursor: int) -> None:
-        self.picture.move(cursor)
-        self.curves.move(cursor)
-
 
 class _SubdiagonalPicture(_Figure):
     def __init__(self, height: str) -> None:
-        x, y = bqplot.LinearScale(min=0, max=1), bqplot.LinearScale(min=0, max=1, reverse=True)
-        scales = {"x": x, "y": y}
-        self._swap = _Swap(x, y)
-        self._cursor = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CHOSEN], stroke_width=2)
-        self._row = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CHOSEN], stroke_width=1.5)
-        self._axes = [_axis(x, "step"), _axis(y, "row", "left")]
-        super().__init__([self._swap.mark, self._cursor, self._row], x, y, self._axes, height, _MARGIN)
+        super().__init__(height, "step", "row", reverse=True)
+        self._swap = _Swap(self._scales)
+        self._stack(self._swap.mark, self._cursor, self._row)
 
     def show(self, view: MapView, limits: tuple[float, float], n: int, steps: int) -> None:
         across, down = (-0.5, steps + 0.5), (0.5, max(n, 2) - 0.5)
         self._range(across, down)
-        self._axes[0].tick_values = [float(t) for t in ticks(0, steps, 7)]
-        self._axes[1].tick_values = [float(t) for t in ticks(1, max(n, 2) - 1, 5)]
+        self._whole_ticks((0, steps), (1, max(n, 2) - 1), (7, 5))
         self._swap.show(picture_png(view.level[::-1], limits, 256), across, down)
-
-    def move(self, cursor: int) -> None:
-        _draw(self._cursor, (np.array([cursor, cursor], dtype=np.float64), np.array([self.y.min, self.y.max])))
-
-    def choose(self, row: int) -> None:
-        _draw(self._row, (np.array([self.x.min, self.x.max]), np.array([row, row], dtype=np.float64)))
 
 
 class _SubdiagonalCurves(_Figure):
     def __init__(self, height: str) -> None:
-        x, y = bqplot.LinearScale(min=0, max=1), bqplot.LinearScale(min=-16, max=0)
-        scales = {"x": x, "y": y}
-        self._others = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[MUTED], stroke_width=1)
-        self._chosen = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CHOSEN], stroke_width=2.5)
-        self._threshold = bqplot.Lines(
-            x=_NOTHING, y=_NOTHING, scales=scales, colors=[THRESHOLD], stroke_width=2, line_style="dashed"
-        )
-        self._cursor = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CHOSEN], stroke_width=2)
-        self._axes = [_axis(x, "step"), _axis(y, "magnitude, log₁₀", "left")]
-        super().__init__([self._others, self._threshold, self._chosen, self._cursor], x, y, self._axes, height, _MARGIN)
+        super().__init__(height, "step", "magnitude, log₁₀")
+        self._others = self._lines(MUTED, 1)
+        self._chosen = self._lines(CHOSEN, 2.5)
+        self._threshold = self._lines(THRESHOLD, 2, style="dashed")
+        self._stack(self._others, self._threshold, self._chosen, self._cursor)
 
     def show(self, view: CurvesView, limits: tuple[float, float], steps: int) -> None:
         lo, hi = float(np.floor(limits[0] - 3.0)), float(np.ceil(limits[1]))
         self._range((-0.5, steps + 0.5), (lo, hi))
-        self._axes[0].tick_values = [float(t) for t in ticks(0, steps, 7)]
-        self._axes[1].tick_values = [float(t) for t in ticks(lo, hi, 6)]
+        self._whole_ticks((0, steps), (lo, hi), (7, 6))
         level = np.clip(view.level, lo, hi)
         gap = np.full((len(view.rows), 1), np.nan)
         xs = np.concatenate([np.broadcast_to(view.steps, level.shape), gap], axis=1)
         ys = np.concatenate([level, gap], axis=1)
-        _draw(self._chosen, (xs[0], ys[0]) if len(xs) else (_NOTHING, _NOTHING))
-        _draw(self._others, (xs[1:].ravel(), ys[1:].ravel()) if len(xs) > 1 else (_NOTHING, _NOTHING))
+        _draw(self._chosen, (xs[0], ys[0]) if len(xs) else (NOTHING, NOTHING))
+        _draw(self._others, (xs[1:].ravel(), ys[1:].ravel()) if len(xs) > 1 else (NOTHING, NOTHING))
         _draw(self._threshold, (view.steps, np.clip(view.threshold, lo, hi)))
-
-    def move(self, cursor: int) -> None:
-        _draw(self._cursor, (np.array([cursor, cursor], dtype=np.float64), np.array([self.y.min, self.y.max])))
 
 
 class DeflationFigure(_Figure):
     """Every deflation by step and row, over the outline of the active window."""
 
     def __init__(self, height: str) -> None:
-        x, y = bqplot.LinearScale(min=0, max=1), bqplot.LinearScale(min=0, max=1, reverse=True)
-        scales = {"x": x, "y": y}
-        self._outline = bqplot.Lines(
-            x=_NOTHING,
-            y=_NOTHING,
-            scales=scales,
-            colors=[ACTIVE],
-            fill="inside",
-            fill_colors=[ACTIVE],
-            fill_opacities=[0.22],
-            stroke_width=0.5,
-        )
-        self._single = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CONVERGED], stroke_width=5)
-        self._pair = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CONVERGED], stroke_width=1.5)
-        self._split = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[SHIFT], stroke_width=2)
-        self._cursor = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CHOSEN], stroke_width=2)
-        self._row = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CHOSEN], stroke_width=1.5)
-        self._axes = [_axis(x, "step"), _axis(y, "row", "left")]
-        marks = [self._outline, self._split, self._pair, self._single, self._cursor, self._row]
-        super().__init__(marks, x, y, self._axes, height, _MARGIN)
+        super().__init__(height, "step", "row", reverse=True)
+        self._outline = self._lines(ACTIVE, 0.5, fill=0.22)
+        self._single = self._lines(CONVERGED, 5)
+        self._pair = self._lines(CONVERGED, 1.5)
+        self._split = self._lines(SHIFT, 2)
+        self._stack(self._outline, self._split, self._pair, self._single, self._cursor, self._row)
         self.widget.add_class("sb-dots")
 
     def show(self, view: DeflationView, n: int, steps: int) -> None:
-        across, down = (-0.5, steps + 0.5), (-0.5, n - 0.5)
-        self._range(across, down)
-        self._axes[0].tick_values = [float(t) for t in ticks(0, steps, 7)]
-        self._axes[1].tick_values = [float(t) for t in ticks(0, n - 1, 5)]
+        self._range((-0.5, steps + 0.5), (-0.5, n - 0.5))
+        self._whole_ticks((0, steps), (0, n - 1), (7, 5))
         # along the first rows and back along the last ones, each held until the next state
         if len(view.outline):
             at = np.append(view.outline[:, 0], min(view.outline[-1, 0] + 1.0, steps))
@@ -362,42 +285,24 @@ class DeflationFigure(_Figure):
             first, last = np.repeat(view.outline[:, 1], 2), np.repeat(view.outline[:, 2], 2)
             _draw(self._outline, (np.concatenate([xs, xs[::-1]]), np.concatenate([first - 0.5, last[::-1] + 0.5])))
         else:
-            _draw(self._outline, (_NOTHING, _NOTHING))
+            _draw(self._outline, (NOTHING, NOTHING))
         wide, tall = 0.006 * (steps + 1), 0.03 * n
-        _draw(self._single, _dots(view.single))
-        _draw(self._pair, _squares(view.pair, wide, tall))
-        _draw(self._split, _crosses(view.split, wide, tall))
-
-    def move(self, cursor: int) -> None:
-        _draw(self._cursor, (np.array([cursor, cursor], dtype=np.float64), np.array([self.y.min, self.y.max])))
-
-    def choose(self, row: int) -> None:
-        _draw(self._row, (np.array([self.x.min, self.x.max]), np.array([row, row], dtype=np.float64)))
-
-
-def _squares(points: Floats, half_x: float, half_y: float) -> tuple[Floats, Floats]:
-    """One path of open rectangles."""
-    x, y = points[:, 0], points[:, 1]
-    gap = np.full(len(points), np.nan)
-    xs = np.stack([x - half_x, x + half_x, x + half_x, x - half_x, x - half_x, gap], axis=1).ravel()
-    ys = np.stack([y - half_y, y - half_y, y + half_y, y + half_y, y - half_y, gap], axis=1).ravel()
-    return (xs, ys) if len(points) else (_NOTHING, _NOTHING)
+        _draw(self._single, dots(view.single))
+        _draw(self._pair, squares(view.pair, wide, tall))
+        _draw(self._split, crosses(view.split, wide, tall))
 
 
 class SpectrumFigure(_Figure):
     """Ritz values in the complex plane; moving ones are crosses, converged ones squares, shifts open diamonds."""
 
     def __init__(self, height: str) -> None:
-        x, y = bqplot.LinearScale(min=-1, max=1), bqplot.LinearScale(min=-1, max=1)
-        scales = {"x": x, "y": y}
-        self._boundary = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[MUTED], stroke_width=1)
-        self._active = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[ACTIVE], stroke_width=1.5)
-        self._converged = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CONVERGED], stroke_width=5)
-        self._shifts = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[SHIFT], stroke_width=2)
-        self._chosen = bqplot.Lines(x=_NOTHING, y=_NOTHING, scales=scales, colors=[CHOSEN], stroke_width=2)
-        self._axes = [_axis(x, "real part"), _axis(y, "imaginary part", "left")]
-        marks = [self._boundary, self._converged, self._active, self._shifts, self._chosen]
-        super().__init__(marks, x, y, self._axes, height, _MARGIN)
+        super().__init__(height, "real part", "imaginary part")
+        self._boundary = self._lines(MUTED, 1)
+        self._active = self._lines(ACTIVE, 1.5)
+        self._converged = self._lines(CONVERGED, 5)
+        self._shifts = self._lines(SHIFT, 2)
+        self._chosen = self._lines(CHOSEN, 2)
+        self._stack(self._boundary, self._converged, self._active, self._shifts, self._chosen)
         self.widget.add_class("sb-dots")
 
     def frame(self, x: tuple[float, float], y: tuple[float, float]) -> None:
@@ -410,19 +315,10 @@ class SpectrumFigure(_Figure):
 
     def show(self, view: SpectrumView) -> None:
         dx, dy = 0.012 * (self.x.max - self.x.min), 0.022 * (self.y.max - self.y.min)
-        _draw(self._active, _crosses(view.active, dx, dy))
-        _draw(self._converged, _dots(view.converged))
-        _draw(self._shifts, _diamonds(view.shifts, 1.6 * dx, 1.6 * dy))
-        _draw(self._chosen, _squares(view.chosen, 2.0 * dx, 2.0 * dy))
-
-
-def _diamonds(points: Floats, half_x: float, half_y: float) -> tuple[Floats, Floats]:
-    """One path of open diamonds."""
-    x, y = points[:, 0], points[:, 1]
-    gap = np.full(len(points), np.nan)
-    xs = np.stack([x - half_x, x, x + half_x, x, x - half_x, gap], axis=1).ravel()
-    ys = np.stack([y, y - half_y, y, y + half_y, y, gap], axis=1).ravel()
-    return (xs, ys) if len(points) else (_NOTHING, _NOTHING)
+        _draw(self._active, crosses(view.active, dx, dy))
+        _draw(self._converged, dots(view.converged))
+        _draw(self._shifts, diamonds(view.shifts, 1.6 * dx, 1.6 * dy))
+        _draw(self._chosen, squares(view.chosen, 2.0 * dx, 2.0 * dy))
 
 
 def _round_ticks(lo: float, hi: float, most: int) -> list[float]:

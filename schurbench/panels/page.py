@@ -88,6 +88,7 @@ class Page:
             (MUTED, "▮", "sweeps waited"),
             (HEALTHY, "▒", "healthy"),
             (CONVERGED, "|", "deflation"),
+            (ACTIVE, "╷", "deflation window"),
             (SHIFT, "❙", "exceptional shift"),
             (CHOSEN, "━", "what you chose: step, row"),
         )
@@ -114,9 +115,10 @@ class Page:
     def _matrix_cell(self) -> Any:
         title = _title(
             "H",
-            "Magnitudes of H; click to choose a row",
-            (ACTIVE, "┅", "active window"),
-            (CHOSEN, "━", "chosen row"),
+            "Magnitudes of H, with the active window and the deflation window of the step; click to choose a row",
+            (ACTIVE, "┅", "active"),
+            (SHIFT, "┉", "deflation window"),
+            (CHOSEN, "━", "chosen"),
         )
         return _cell(title, self.matrix, self.say["matrix"])
 

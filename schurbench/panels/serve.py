@@ -26,10 +26,14 @@ MESSAGE_LIMIT = 512 << 20
 #: Seconds a server may take to close its kernels after an interrupt before it is told again.
 _PATIENCE = 5.0
 
+#: What a plain page may load: nothing but what the server itself has. Voilà's pages name style sheets on another host;
+#: the browser then asks for none of them.
+_PAGE_POLICY = "default-src 'self' 'unsafe-inline' 'unsafe-eval' data: blob:; frame-ancestors 'self'"
+
 _ANNOUNCEMENTS = "@jupyterlab/apputils-extension:announcements"
 
 
-def workbench_notebook(file: Path | None = None, key: str | None = None) -> dict[str, Any]:
+def workbench_notebook(file: Path | None = None, key: str | None = None, labels: Path | None = None) -> dict[str, Any]:
     """The notebook that shows the workbench on a file, or on the demonstration plant.
 
     Parameters
@@ -37,17 +41,20 @@ def workbench_notebook(file: Path | None = None, key: str | None = None) -> dict
     file : Path, optional
     key : str, optional
         Array in the file.
+    labels : Path, optional
+        Text file with the name of one state a line.
 
     Returns
     -------
     dict
-        nbformat 4.5, without outputs. Path and key appear in it as escaped Python literals.
+        nbformat 4.5, without outputs. Paths and key appear in it as escaped Python literals.
     """
     if file is None:
         matrix, what = "sb.demo_matrix()", "the demonstration plant"
     else:
-        matrix = f"sb.load({_literal(str(file))}" + (f", key={_literal(key)}" if key else "") + ")"
-        what = "your matrix"
+        given = {"key": key, "labels": labels}
+        further = "".join(f", {name}={_literal(str(value))}" for name, value in given.items() if value)
+        matrix, what = f"sb.load({_literal(str(file))}{further})", "your matrix"
     words = f"Run the cell below (Shift and Enter) for the workbench on {what}; after a restart of the kernel, again."
     return {
         "cells": [
@@ -117,8 +124,10 @@ def lab_command(notebook: Path, *, browser: bool = True, extra: tuple[str, ...] 
     ]
 
 
-def page_command(notebook: Path, *, browser: bool = True) -> list[str]:
-    """The command that serves one notebook as a plain page through Voilà: this machine only, with a token."""
+def page_command(notebook: Path, *, browser: bool = True, extra: tuple[str, ...] = ()) -> list[str]:
+    """The command that serves one notebook as a plain page through Voilà: this machine only, with a token, asking
+    nothing outside."""
+    settings = {"websocket_max_message_size": MESSAGE_LIMIT, "headers": {"Content-Security-Policy": _PAGE_POLICY}}
     return [
         sys.executable,
         "-m",
@@ -126,8 +135,10 @@ def page_command(notebook: Path, *, browser: bool = True) -> list[str]:
         str(notebook),
         "--Voila.ip=127.0.0.1",
         "--Voila.auto_token=True",
-        f"--Voila.tornado_settings={{'websocket_max_message_size': {MESSAGE_LIMIT}}}",
+        "--VoilaConfiguration.show_tracebacks=True",  # a page has no other place to say what went wrong
+        f"--Voila.tornado_settings={settings!r}",
         *(() if browser else ("--no-browser",)),
+        *extra,
     ]
 
 
@@ -143,7 +154,12 @@ def lab_environment(folder: Path) -> dict[str, str]:
 
 
 def open_workbench(
-    file: Path | None = None, *, key: str | None = None, page: bool = False, browser: bool = True
+    file: Path | None = None,
+    *,
+    key: str | None = None,
+    labels: Path | None = None,
+    page: bool = False,
+    browser: bool = True,
 ) -> int:
     """Serve the workbench until the user stops the server.
 
@@ -153,6 +169,8 @@ def open_workbench(
         Matrix file; the demonstration plant without it.
     key : str, optional
         Array in the file.
+    labels : Path, optional
+        Text file with the name of one state a line.
     page : bool
         A plain page through Voilà instead of JupyterLab.
     browser : bool
@@ -166,7 +184,7 @@ def open_workbench(
     Raises
     ------
     InputError
-        The file holds no matrix that can be loaded.
+        The file holds no matrix that can be loaded, or a key or labels are given without a file.
     SchurbenchError
         JupyterLab, or for a page Voilà, is not installed.
     """
@@ -179,9 +197,11 @@ def open_workbench(
         )
     stem = "schurbench_demo"
     if file is not None:
-        stem = f"{_plain_stem(load(file, key).name)}_workbench"
-        file = Path(file).resolve()
-    notebook = workbench_notebook(file, key)
+        stem = f"{_plain_stem(load(file, key, labels).name)}_workbench"
+        file, labels = Path(file).resolve(), None if labels is None else Path(labels).resolve()
+    elif key is not None or labels is not None:
+        raise InputError("an array or labels are named, but no matrix file; name the file they belong to")
+    notebook = workbench_notebook(file, key, labels)
     if page:
         del notebook["cells"][0]  # how to run a cell: a page has none to run
         stem += "_page"

@@ -14,6 +14,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
+from schurbench.journal.records import SPIKE
 from schurbench.measures import ULP
 from schurbench.panels.text import complex_number, rows
 from schurbench.policy import deflation_test
@@ -35,6 +36,7 @@ __all__ = [
     "finished_rows",
     "healthy_wait",
     "longest_wait",
+    "looked_into",
     "magnitude_limits",
     "map_view",
     "matrix_view",
@@ -61,10 +63,14 @@ CURVE_POINTS = 250
 
 @dataclass(frozen=True, slots=True, eq=False)
 class MatrixView:
-    """Magnitudes of H at the cursor: ``level`` (p, p) is log10, the largest of each block, -inf for all-zero blocks."""
+    """Magnitudes of H at the cursor: ``level`` (p, p) is log10, the largest of each block, -inf for all-zero blocks.
+
+    ``window`` is the active window, ``looked_into`` the deflation window of the step, both half-open and possibly empty.
+    """
 
     level: Floats
     window: tuple[int, int]
+    looked_into: tuple[int, int]
     sentence: str
 
 
@@ -115,16 +121,18 @@ class SpectrumView:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class TrackView:
-    """Sweeps waited at each step, pooled to at most 1200 columns, and where deflations and exceptional shifts are.
+    """Sweeps waited at each step, pooled to at most 1200 columns, and the steps that stand out.
 
-    ``edges`` (q+1,) bound the columns on the step axis, ``height`` (q,) is the longest wait in each; ``healthy`` is the
-    longest wait of healthy runs, ``top`` where the axis ends.
+    ``edges`` (q+1,) bound the columns on the step axis, ``height`` (q,) is the longest wait in each. ``deflations``,
+    ``exceptional`` (shifts) and ``windows`` (looked into, without a sweep) are steps. ``healthy`` is the longest wait
+    of healthy runs, ``top`` where the axis ends.
     """
 
     edges: Floats
     height: Floats
     deflations: Floats
     exceptional: Floats
+    windows: Floats
     healthy: float
     top: float
 
@@ -253,7 +261,15 @@ def matrix_view(run: Run, cursor: int, state: State | None = None) -> MatrixView
     else:
         where = f"All {n} rows are finished."
     amounts = f"Zero: {number(share * zeros)}\u00a0%; under rounding level: {number(share * faint)}\u00a0%."
-    return MatrixView(level, (lo, hi), f"{where} {amounts}")
+    return MatrixView(level, (lo, hi), looked_into(run, cursor), f"{where} {amounts}")
+
+
+def looked_into(run: Run, cursor: int) -> tuple[int, int]:
+    """Rows of the deflation window that step ``cursor`` looked into; (0, 0) for any other step."""
+    step = run.steps[cursor - 1] if cursor >= 1 else None
+    if step is None or step.kind != "deflation window":
+        return 0, 0
+    return step.window[1] - step.rows, step.window[1]
 
 
 def map_view(run: Run) -> MapView:
@@ -399,11 +415,12 @@ def spectrum_view(run: Run, cursor: int, row: int | None = None) -> SpectrumView
     values = np.asarray(run.to_matrix_units(run.ritz(cursor)), dtype=np.complex128)
     done = finished_rows(run, cursor)
     step = run.steps[cursor - 1] if cursor >= 1 else None
-    shifts = run.to_matrix_units(np.array(step.shifts, dtype=np.complex128)) if step and step.shifts else np.empty(0)
+    used = (step.shifts or step.handed_on) if step is not None else ()
+    shifts = run.to_matrix_units(np.array(used, dtype=np.complex128)) if used else np.empty(0)
     chosen = values[row : row + 1] if row is not None and 0 <= row < run.n else np.empty(0)
     text = f"{int(done.sum())} of {run.n} converged."
     if step is not None and len(shifts):
-        kind = "Exceptional shift" if step.exceptional else "Shift"
+        kind = "Exceptional shift" if step.exceptional else "Shift" if step.shifts else "Handed-on shift"
         text += f" {kind}{'s' if len(shifts) > 1 else ''} {_shifts_text(shifts)}."
     if done.any():
         rightmost = values[done][int(np.argmax(values[done].real))]
@@ -417,10 +434,13 @@ def spectrum_view(run: Run, cursor: int, row: int | None = None) -> SpectrumView
 
 def _shifts_text(shifts: npt.NDArray[np.complex128]) -> str:
     first = complex(shifts[0])
-    if len(shifts) == 2 and complex(shifts[1]) == first.conjugate() and first.imag != 0.0:
-        return complex_number(complex(first.real, abs(first.imag))).replace(" + ", " ± ")
-    more = f" and {len(shifts) - 2} more" if len(shifts) > 2 else ""
-    return " and ".join(complex_number(complex(shift)) for shift in shifts[:2]) + more
+    if len(shifts) > 1 and complex(shifts[1]) == first.conjugate() and first.imag != 0.0:
+        named = [complex_number(complex(first.real, abs(first.imag))).replace(" + ", " ± ")]
+    else:
+        named = [complex_number(complex(shift)) for shift in shifts[:2]]
+    if len(shifts) > 2:
+        named.append(f"{len(shifts) - 2} more")
+    return " and ".join([", ".join(named[:-1]), named[-1]] if len(named) > 1 else named)
 
 
 def track_view(run: Run, columns: int = 1200) -> TrackView:
@@ -433,7 +453,8 @@ def track_view(run: Run, columns: int = 1200) -> TrackView:
     exceptional = np.array(run.exceptional_steps, dtype=np.float64)
     healthy = float(healthy_wait(run))
     top = max(float(waits.max(initial=0.0)), 1.25 * healthy)
-    return TrackView(edges, height, deflations, exceptional, healthy, top)
+    windows = np.array([step.index for step in run.steps if step.kind == "deflation window"], dtype=np.float64)
+    return TrackView(edges, height, deflations, exceptional, windows, healthy, top)
 
 
 def track_sentence(run: Run, cursor: int) -> str:
@@ -442,8 +463,17 @@ def track_sentence(run: Run, cursor: int) -> str:
     if cursor == 0:
         return f"Start: the Hessenberg form of {run.matrix.name}. {plural(last, 'step')} recorded."
     step = run.steps[cursor - 1]
+    if step.kind == "deflation window":
+        out = sum(event.size for event in step.deflations if event.test == SPIKE)
+        handed = len(step.handed_on)
+        return (
+            f"Step {cursor} of {last}: looked into a deflation window of {plural(step.rows, 'row')}: "
+            f"{plural(out, 'eigenvalue') if out else 'none'} deflated, {handed or 'none'} handed on as shifts."
+        )
     kinds = {"single": "single shift", "double": "double shift", "two singles": "two single shifts"}
     kind = "no sweep needed" if step.kind == "scan" else kinds.get(str(step.kind), str(step.kind))
+    if step.kind == "many shifts":
+        kind = f"{len(step.shifts)} shifts"
     text = f"Step {cursor} of {last}: {kind}, {rows(step.window)}"
     if step.exceptional:
         text += ", exceptional"

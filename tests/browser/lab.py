@@ -1,4 +1,4 @@
-"""A JupyterLab server and a page of Chromium on it, for the browser tests."""
+"""Servers as ``schurbench open`` starts them, and a page of Chromium on them, for the browser tests."""
 
 from __future__ import annotations
 
@@ -14,7 +14,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
-from schurbench.panels.serve import lab_command, lab_environment
+from schurbench.panels.serve import lab_command, lab_environment, page_command
 
 #: Software drawing, no background traffic.
 CHROMIUM_ARGUMENTS = [
@@ -41,17 +41,41 @@ _NOTEBOOK_READY = """
 
 @contextlib.contextmanager
 def lab_server(notebook: Path, scratch: Path) -> Iterator[str]:
-    """Serve a notebook as ``schurbench open`` does, on a port of its own; yields the address of the notebook."""
-    with socket.socket() as probe:
-        probe.bind(("127.0.0.1", 0))
-        port = probe.getsockname()[1]
-    token = secrets.token_hex(16)
+    """Serve a notebook in JupyterLab, on a port of its own; yields the address of the notebook."""
+    port, token = _free_port(), secrets.token_hex(16)
     extra = (
         f"--ServerApp.port={port}",
         "--ServerApp.port_retries=0",
         f"--IdentityProvider.token={token}",
         "--LabApp.expose_app_in_browser=True",
     )
+    base = f"http://127.0.0.1:{port}"
+    command = lab_command(notebook, browser=False, extra=extra)
+    with _serving(command, f"{base}/api/status?token={token}", notebook.parent, scratch):
+        yield f"{base}/lab/tree/{notebook.name}?reset&token={token}"
+
+
+@contextlib.contextmanager
+def page_server(notebook: Path, scratch: Path) -> Iterator[str]:
+    """Serve a notebook as a plain page, on a port of its own; yields the address of the page."""
+    port, token = _free_port(), secrets.token_hex(16)
+    extra = (f"--Voila.port={port}", "--Voila.port_retries=0", f"--Voila.token={token}")
+    base = f"http://127.0.0.1:{port}"
+    # the page itself would start a kernel for whoever asks, so readiness is read from a file that it needs
+    ready = f"{base}/voila/static/voila.js?token={token}"
+    with _serving(page_command(notebook, browser=False, extra=extra), ready, notebook.parent, scratch):
+        yield f"{base}/?token={token}"
+
+
+def _free_port() -> int:
+    with socket.socket() as probe:
+        probe.bind(("127.0.0.1", 0))
+        return int(probe.getsockname()[1])
+
+
+@contextlib.contextmanager
+def _serving(command: list[str], ready: str, folder: Path, scratch: Path) -> Iterator[None]:
+    """Run a server in a folder until the block ends, which begins when it answers under ``ready``."""
     environment = lab_environment(scratch / "settings") | {
         "JUPYTER_CONFIG_DIR": str(scratch / "config"),
         "JUPYTER_DATA_DIR": str(scratch / "data"),
@@ -59,27 +83,20 @@ def lab_server(notebook: Path, scratch: Path) -> Iterator[str]:
         "PYTHONUNBUFFERED": "1",
     }
     environment.pop("JUPYTER_TOKEN", None)
-    log = (scratch / "server.log").open("w", encoding="utf-8")
-    server = subprocess.Popen(
-        lab_command(notebook, browser=False, extra=extra),
-        env=environment,
-        stdout=log,
-        stderr=subprocess.STDOUT,
-        cwd=notebook.parent,
-        start_new_session=True,
-    )
-    try:
-        base = f"http://127.0.0.1:{port}"
-        _wait_for(f"{base}/api/status?token={token}", server, scratch / "server.log")
-        yield f"{base}/lab/tree/{notebook.name}?reset&token={token}"
-    finally:
-        server.send_signal(signal.SIGINT)
+    with (scratch / "server.log").open("w", encoding="utf-8") as log:
+        server = subprocess.Popen(
+            command, env=environment, stdout=log, stderr=subprocess.STDOUT, cwd=folder, start_new_session=True
+        )
         try:
-            server.wait(15)
-        except subprocess.TimeoutExpired:
-            os.killpg(server.pid, signal.SIGKILL)
-            server.wait(15)
-        log.close()
+            _wait_for(ready, server, scratch / "server.log")
+            yield
+        finally:
+            server.send_signal(signal.SIGINT)
+            try:
+                server.wait(15)
+            except subprocess.TimeoutExpired:
+                os.killpg(server.pid, signal.SIGKILL)
+                server.wait(15)
 
 
 def _wait_for(address: str, server: subprocess.Popen[bytes], log: Path) -> None:
@@ -96,23 +113,31 @@ def _wait_for(address: str, server: subprocess.Popen[bytes], log: Path) -> None:
 
 @contextlib.contextmanager
 def chromium_page(chromium: str, width: int, height: int) -> Iterator[tuple[Any, list[str]]]:
-    """A page, and the list in which every address it asks for outside this machine is noted."""
+    """A page that reaches this machine only, and the list of every address outside that it would have fetched.
+
+    What the page's own policy stops never leaves the browser and is not listed.
+    """
     from playwright.sync_api import sync_playwright
 
     outside: list[str] = []
 
-    def noted(request: Any) -> None:
-        if not request.url.startswith(("http://127.0.0.1:", "ws://127.0.0.1:", "data:", "blob:", "about:")):
-            outside.append(request.url)
+    def refuse(route: Any) -> None:
+        outside.append(route.request.url)
+        route.abort()
 
     with sync_playwright() as playwright:
         browser = playwright.chromium.launch(executable_path=chromium, args=CHROMIUM_ARGUMENTS)
         try:
             page = browser.new_page(viewport={"width": width, "height": height})
-            page.on("request", noted)
+            page.on("websocket", lambda socket: outside.append(socket.url) if _elsewhere(socket.url) else None)
+            page.route(_elsewhere, refuse)
             yield page, outside
         finally:
             browser.close()
+
+
+def _elsewhere(address: str) -> bool:
+    return not address.startswith(("http://127.0.0.1:", "ws://127.0.0.1:", "data:", "blob:", "about:"))
 
 
 def open_notebook(page: Any, address: str) -> None:

@@ -17,44 +17,11 @@ import scipy.io
 import schurbench as sb
 from schurbench.measures import RATIO_LIMIT, orthogonality_ratio, residual_ratio
 from tests.browser.lab import chromium_page, lab_server, open_notebook, run_all, set_theme
+from tests.browser.seen import ALL_DRAWN, DRAWN, FAULTS, ROOT, picture, shot
 
 pytestmark = [pytest.mark.browser, pytest.mark.slow]
 
-ROOT = Path(__file__).parent.parent.parent
-ARTIFACTS = ROOT / "artifacts"
 SECONDS = 1000
-
-#: A figure counts as drawn when a mark in it has size: a path with more than its starting point, or a picture.
-_DRAWN = """
-() => Array.from(document.querySelectorAll('.sb-bench .bqplot')).map(figure => {
-  const marks = Array.from(figure.querySelectorAll('.svg-figure path, .svg-figure image'));
-  return marks.filter(mark => {
-    const box = mark.getBoundingClientRect();
-    if (mark.tagName === 'image') return (mark.href.baseVal || '').startsWith('blob:') && box.width > 20;
-    return (mark.getAttribute('d') || '').length > 20 && box.width + box.height > 20;
-  }).length;
-})
-"""
-
-#: Text that its box cuts off, and panels that lie over each other.
-_FAULTS = """
-() => {
-  const faults = [];
-  for (const node of document.querySelectorAll('.sb-bench .sb-say, .sb-bench .sb-title, .sb-bench .sb-where, .sb-bench button')) {
-    if (node.offsetParent && (node.scrollWidth > node.clientWidth + 1 || node.scrollHeight > node.clientHeight + 3))
-      faults.push('cut: ' + node.innerText);
-  }
-  const boxes = Array.from(document.querySelectorAll('.sb-bench .bqplot')).map(f => f.getBoundingClientRect());
-  boxes.forEach((a, i) => boxes.slice(i + 1).forEach(b => {
-    if (a.left < b.right - 1 && b.left < a.right - 1 && a.top < b.bottom - 1 && b.top < a.bottom - 1)
-      faults.push('figures overlap');
-  }));
-  const bench = document.querySelector('.sb-bench').getBoundingClientRect();
-  const side = document.querySelector('.sb-side').getBoundingClientRect();
-  if (side.right > bench.right + 1) faults.push('side column leaves the page');
-  return faults;
-}
-"""
 
 
 @pytest.fixture(scope="module")
@@ -81,30 +48,13 @@ def page(request: pytest.FixtureRequest, address: str, chromium: str) -> Iterato
         page.locator(".sb-bench").wait_for(timeout=60 * SECONDS)
         page.get_by_text("Converged after").first.wait_for(timeout=60 * SECONDS)
         page.locator(".sb-finding").first.wait_for(timeout=60 * SECONDS)
-        page.wait_for_function(f"() => ({_DRAWN})().length === 5 && ({_DRAWN})().every(n => n > 0)")
+        page.wait_for_function(ALL_DRAWN)
         yield page
         assert outside == []
         assert faults == []
         page.evaluate(
             "() => window.jupyterapp.shell.currentWidget.sessionContext.session.kernel.shutdown()"
         )  # a page opened on a kernel full of old widgets restores them first
-
-
-def picture(page: Any, panel: int) -> str:
-    """What a figure shows: the data of its paths and the address of its picture."""
-    return str(
-        page.evaluate(
-            """panel => Array.from(document.querySelectorAll('.sb-bench .bqplot')[panel]
-                .querySelectorAll('.svg-figure path, .svg-figure image'))
-                .map(mark => mark.getAttribute('d') || mark.href?.baseVal || '').join('|')""",
-            panel,
-        )
-    )
-
-
-def shot(page: Any, name: str) -> None:
-    ARTIFACTS.mkdir(exist_ok=True)
-    page.screenshot(path=ARTIFACTS / f"{name}.png")
 
 
 def test_the_whole_job(page: Any, folder: Path) -> None:
@@ -138,7 +88,7 @@ def test_the_whole_job(page: Any, folder: Path) -> None:
     assert picture(page, 4) != rows
 
     page.get_by_role("button", name="curves", exact=True).click()
-    page.wait_for_function(f"() => ({_DRAWN})().every(n => n > 0)")
+    page.wait_for_function(ALL_DRAWN)
     shot(page, "curves-1280")
 
     # another strategy
@@ -204,7 +154,7 @@ def test_nothing_overlaps_or_is_cut_in_either_theme(page: Any) -> None:
         page.wait_for_timeout(500)
         page.locator(".sb-bench").evaluate("bench => bench.scrollIntoView()")
         shot(page, f"workbench-{width}-{theme.lower()}")
-        assert page.evaluate(_FAULTS) == []
-        assert all(n > 0 for n in page.evaluate(_DRAWN))
+        assert page.evaluate(FAULTS) == []
+        assert all(n > 0 for n in page.evaluate(DRAWN))
         bench = page.locator(".sb-bench").bounding_box()
         assert bench["height"] < page.viewport_size["height"] - 110  # what JupyterLab leaves for a notebook

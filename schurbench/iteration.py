@@ -11,12 +11,14 @@ import cmath
 import threading
 import time
 from collections.abc import Callable, Sequence
+from dataclasses import asdict, replace
 from numbers import Real
-from typing import TYPE_CHECKING, Any
+from pathlib import Path
+from typing import Any
 
 import numpy as np
 
-from schurbench.errors import SchurbenchError, SettingsError
+from schurbench.errors import InputError, SchurbenchError, SettingsError
 from schurbench.intake import WorkingMatrix, load
 from schurbench.journal.environment import environment
 from schurbench.journal.journal import Journal
@@ -33,6 +35,7 @@ from schurbench.journal.records import (
     Window,
 )
 from schurbench.journal.run import Run
+from schurbench.journal.store import RunStore, require_free
 from schurbench.measures import RATIO_LIMIT, Array, frobenius, orthogonality_ratio, residual_ratio
 from schurbench.policy import (
     EXCEPTIONAL_PERIOD,
@@ -50,10 +53,7 @@ from schurbench.policy import (
 )
 from schurbench.prepare.preparation import BALANCE_CHOICES, prepare, single_blas_thread
 
-if TYPE_CHECKING:
-    from pathlib import Path
-
-__all__ = ["Iteration", "iterate"]
+__all__ = ["Iteration", "drive", "iterate"]
 
 #: Sweeps without any deflation after which a run counts as stalled: five times the longest wait seen on healthy
 #: matrices (12 sweeps, double shift, Gaussian matrices of n = 20 to 200).
@@ -86,8 +86,8 @@ class Iteration:
     Parameters
     ----------
     matrix : WorkingMatrix, or anything `schurbench.load` accepts
-    strategy, form, balance, flip, deflation, tol, exceptional, accumulate, limit, stop_when_stalled, keep, shifts
-        As for `iterate`.
+    strategy, form, balance, flip, deflation, tol, exceptional, accumulate, limit, stop_when_stalled, keep, store, shifts
+        As for `iterate`. With a store, `close` says that no more steps will follow.
 
     Examples
     --------
@@ -98,6 +98,11 @@ class Iteration:
     >>> it.stop.reason
     <StopReason.CONVERGED: 'converged'>
     """
+
+    _window: Window
+    _fresh: bool  # nothing has been scanned yet
+    _sweeps: int
+    _waited: int
 
     def __init__(
         self,
@@ -114,8 +119,10 @@ class Iteration:
         limit: int | None = None,
         stop_when_stalled: bool = False,
         keep: str | int = "256 MiB",
+        store: str | Path | None = None,
         shifts: Sequence[complex] | None = None,
     ) -> None:
+        directory = None if store is None else require_free(store)
         self.matrix: WorkingMatrix = load(matrix)
         self._strategy, self.settings = _resolve(
             self.matrix, strategy, form, balance, flip, deflation, tol, exceptional, accumulate, limit,
@@ -123,31 +130,88 @@ class Iteration:
         )  # fmt: skip
         began = time.perf_counter()
         self.preparation = prepare(self.matrix, self.settings.form, balance, flip, accumulate)
-        self._phases = {"reduce": time.perf_counter() - began, "iterate": 0.0}
+        self._phases = {"reduce": time.perf_counter() - began, "iterate": 0.0, "compile": 0.0}
+        self._environment: dict[str, Any] | None = None
+        self._make_kernels_ready()
+        from schurbench.kernels import split
 
+        H, Qh = split(self.preparation.H), split(self.preparation.Qh)
+        start = (H.copy(), Qh.copy())
+        begun = None
+        if directory is not None:
+            begun = RunStore.create(directory, self.matrix, self.preparation, start, self._head(None))
+        self._take_up(H, Qh, Journal.begin(*start, (0, self.n), self.settings.keep, begun))
+        self._store = begun
+
+    @classmethod
+    def continue_from(
+        cls,
+        run: Run,
+        *,
+        limit: int | None = None,
+        stop_when_stalled: bool | None = None,
+        store: str | Path | bool | None = None,
+        strategy: ShiftStrategy | None = None,
+    ) -> Iteration:
+        """An iteration that goes on where a run stopped; see `Run.resume`, whose parameters and errors these are."""
+        if run.converged:
+            raise SettingsError(
+                "the run has converged, so there is nothing left to do; start a new one for other settings"
+            )
+        self = cls.__new__(cls)
+        self.matrix, self.preparation = run.matrix, run.preparation
+        self._strategy = _recorded_strategy(run, strategy)
+        if limit is None:
+            limit = run.settings.limit if run.sweeps < run.settings.limit else run.sweeps + run.settings.limit
+        if stop_when_stalled is None:
+            stop_when_stalled = run.settings.stop_when_stalled and run.stop.reason is not StopReason.STALLED
+        _check_limits(limit, stop_when_stalled)
+        self.settings = replace(run.settings, limit=int(limit), stop_when_stalled=bool(stop_when_stalled))
+        self._phases = dict(run.phases)
+        now = environment()
+        earlier = run.environment.get("continued", [])
+        self._environment = {**run.environment, "continued": [*earlier, {"after_step": len(run.steps), **now}]}
+        self._make_kernels_ready()
+        H, Qh = run._final
+        self._take_up(H.copy(), Qh.copy(), run.journal.continued())
+        stop = self._judge()
+        if stop is not None:
+            raise SettingsError(f"the run cannot go on: {stop.message}")
+        if store is not False:
+            self._store = _store_to_go_on(run, store, self._head(None))
+            self._journal.store = self._store
+        return self
+
+    def _make_kernels_ready(self) -> None:
         began = time.perf_counter()
-        from schurbench.kernels import Workspace, deflate, make_ready, scan, split, sweep
+        from schurbench.kernels import deflate, make_ready, scan, sweep
 
         self._looks = getattr(self._strategy, "deflation_window", None)
         make_ready(self.settings.form, self._looks is not None)
-        self._phases["compile"] = time.perf_counter() - began
         self._kernels = (sweep, scan, deflate)
-        self._H: Array = split(self.preparation.H)
-        self._Qh: Array = split(self.preparation.Qh)
+        self._phases["compile"] += time.perf_counter() - began
+
+    def _take_up(self, H: Array, Qh: Array, journal: Journal) -> None:
+        """Be ready for the step after the last one recorded; H and Zᴴ are those of its state."""
+        from schurbench.kernels import Workspace
+
+        self._H, self._Qh, self._journal = H, Qh, journal
         self._work = Workspace(self._H)
         self._real = self.settings.form == "real"
-        self._norm = frobenius(self._H)
-        self._test = deflation_test(deflation)
-        self._tol = -1.0 if tol is None else float(tol)
+        self._norm = frobenius(journal.checkpoints[0][0])
+        self._test = deflation_test(self.settings.deflation)
+        self._tol = -1.0 if self.settings.tol is None else self.settings.tol
         self._view = WindowView(self._H)
         self._trusted = type(self._strategy) in _BUILT_IN
-        self._window: Window = (0, self.n)
-        self._fresh = True  # nothing has been scanned yet
-        self._waited = 0
-        self._sweeps = 0
-        self._measure_at = _ROUNDING_FIRST * max(10, self.n)
         self._stop: Stop | None = None
-        self._journal = Journal(self._H.copy(), self._Qh.copy(), self._window, self.settings.keep)
+        self._store: RunStore | None = None  # the one to write to; the journal may read an older one
+        self._closed = False
+        self._recall()
+        # the first measurement that is due now, unless it was made at an earlier step, or later
+        first, every = _ROUNDING_FIRST * max(10, self.n), _ROUNDING_EVERY * max(10, self.n)
+        done = bool(journal.steps) and not journal.steps[-1].shifts
+        passed = max(0, -(-(self._sweeps + done - first) // every))
+        self._measure_at = first + passed * every
 
     @property
     def n(self) -> int:
@@ -211,6 +275,8 @@ class Iteration:
         """
         if self._stop is not None:
             raise SchurbenchError(f"the iteration is done ({self._stop.message}); start a new one for more steps")
+        if self._closed:
+            raise SchurbenchError("the iteration was closed; go on with run().resume()")
         began = time.perf_counter()
         try:
             step = self._step(began)
@@ -218,38 +284,81 @@ class Iteration:
             self._undo()
             raise
         self._phases["iterate"] += time.perf_counter() - began
-        if self._window[1] == 0:
-            self._stop = Stop(StopReason.CONVERGED, f"converged after {_count(self._sweeps, 'sweep')}", (0, 0))
-        elif self.settings.stop_when_stalled and self._waited >= STALLED_AFTER:
-            lo, hi = self._window
-            self._stop = Stop(
+        self._stop = self._judge()
+        if self._stop is not None:
+            self.close()
+        return step
+
+    def _judge(self) -> Stop | None:
+        """Whether the iteration ends with the last step recorded, and why."""
+        lo, hi = self._window
+        if hi == 0:
+            return Stop(StopReason.CONVERGED, f"converged after {_count(self._sweeps, 'sweep')}", (0, 0))
+        if self.settings.stop_when_stalled and self._waited >= STALLED_AFTER:
+            return Stop(
                 StopReason.STALLED,
                 f"stalled: no deflation in {self._waited} sweeps on rows {lo} to {hi - 1}; see the diagnosis for what to change",
                 self._window,
             )
-        elif self._rounding_too_large():
-            self._stop = Stop(
+        if self._rounding_too_large():
+            return Stop(
                 StopReason.STALLED,
                 f"stalled: after {self._sweeps} sweeps rounding has used up half of what a certificate allows, so that more "
                 "sweeps would spoil the factors; see the diagnosis for what to change",
                 self._window,
             )
-        elif self._sweeps >= self.settings.limit:
-            lo, hi = self._window
-            self._stop = Stop(
+        if self._sweeps >= self.settings.limit:
+            return Stop(
                 StopReason.LIMIT,
                 f"stopped at the limit of {_count(self._sweeps, 'sweep')} with rows {lo} to {hi - 1} unfinished",
                 self._window,
             )
-        return step
+        if self._store is not None and self._store.failed is not None:
+            return Stop(
+                StopReason.CANCELLED,
+                f"stopped after {_count(self._sweeps, 'sweep')} because {self._store.failed}; the run is still in memory",
+                self._window,
+            )
+        return None
 
-    def run(self) -> Run:
-        """Everything done so far as a `Run`; the iteration may go on afterwards."""
-        stop = self._stop or Stop(
+    def close(self) -> None:
+        """Write what has not been written to the store yet and let go of it; without a store, only end the iteration.
+
+        A finished iteration closes by itself. A closed one takes no more steps; its run can be resumed.
+        """
+        self._closed = True
+        if self._store is None:
+            return
+        if self._store.held:
+            self._store.flush()
+            self._store.head = self._head(self._stop or self._stopped_by_hand())
+            self._store.add_checkpoint(len(self._journal.steps), self._H, self._Qh)
+        self._store.close()
+
+    def _head(self, stop: Stop | None) -> dict[str, Any]:
+        """What a store holds beside the record itself."""
+        return {
+            "settings": self.settings.to_dict(),
+            "phases": dict(self._phases),
+            "environment": self._environment or environment(),
+            "stop": None if stop is None else asdict(stop),
+        }
+
+    def _stopped_by_hand(self) -> Stop:
+        return Stop(
             StopReason.CANCELLED,
             f"stopped by hand after {_count(self._sweeps, 'sweep')} with {self._window[1]} of {self.n} rows unfinished",
             self._window,
         )
+
+    def run(self) -> Run:
+        """Everything done so far as a `Run`; the iteration may go on afterwards."""
+        stop = self._stop or self._stopped_by_hand()
+        store = self._store
+        if store is not None:
+            store.flush()
+            if store.failed is not None and store.failed not in stop.message:
+                stop = replace(stop, message=f"{stop.message}; {store.failed}, so the run is whole in memory only")
         return Run(
             matrix=self.matrix,
             settings=self.settings,
@@ -257,9 +366,9 @@ class Iteration:
             journal=self._journal.snapshot(),
             stop=stop,
             phases=dict(self._phases),
-            environment=environment(),
+            environment=self._environment or environment(),
             # a finished iteration never changes its arrays again, so they need no copy
-            _final=(self._H, self._Qh) if self.done else (self._H.copy(), self._Qh.copy()),
+            _final=(self._H, self._Qh) if self._closed else (self._H.copy(), self._Qh.copy()),
         )
 
     def _step(self, began: float) -> Step:
@@ -411,8 +520,25 @@ class Iteration:
         H, Qh = self._journal.rebuild(len(self._journal.steps))
         self._H[:] = H
         self._Qh[:] = Qh
+        self._recall()
+
+    def _recall(self) -> None:
+        """Read everything that the next step depends on, beside H and Zᴴ, off the record."""
+        steps, view = self._journal.steps, self._view
         self._window = self._journal.windows[-1]
-        self._fresh = not self._journal.steps
+        self._fresh = not steps
+        self._sweeps = sum(1 for step in steps if step.shifts)
+        self._waited = 0
+        for step in reversed(steps):
+            if any(not d.before_sweep for d in step.deflations):
+                break
+            self._waited += bool(step.shifts)
+        view.found = None
+        if steps and steps[-1].rows:
+            bottom = steps[-1].window[1]
+            left = min((d.row for d in steps[-1].deflations if d.test == SPIKE), default=bottom)
+            view.found = (bottom - left) / steps[-1].rows
+        view.handed_on = next((step.handed_on for step in reversed(steps) if step.rows), ())
 
 
 def iterate(
@@ -462,8 +588,9 @@ def iterate(
         Stop after 60 sweeps without a deflation.
     keep : str or int
         Memory for checkpoints, such as ``"256 MiB"`` or a number of bytes.
-    store : None
-        Reserved for runs larger than memory.
+    store : str or Path, optional
+        Directory, empty or not there yet, that the run is recorded in while it goes on. It can be opened with `open_run` at any
+        moment, also after the process was killed, and resumed. Needs the extra ``store`` (Zarr).
     progress : callable, optional
         Called with a `Progress` at most 20 times a second, and at the end.
     cancel : threading.Event, optional
@@ -480,18 +607,27 @@ def iterate(
     Raises
     ------
     InputError
-        The matrix cannot be used.
+        The matrix cannot be used, or the directory for the run.
     SettingsError
         The settings cannot be carried out on it.
     """
-    if store is not None:
-        raise SettingsError("store= is not in this version; keep the run in memory and use run.save(path)")
     began = time.perf_counter()
     iteration = Iteration(
         matrix, strategy, form=form, balance=balance, flip=flip, deflation=deflation, tol=tol, exceptional=exceptional,
-        accumulate=accumulate, limit=limit, stop_when_stalled=stop_when_stalled, keep=keep, shifts=shifts,
+        accumulate=accumulate, limit=limit, stop_when_stalled=stop_when_stalled, keep=keep, store=store, shifts=shifts,
     )  # fmt: skip
-    told = began
+    return drive(iteration, progress, cancel, began)
+
+
+def drive(
+    iteration: Iteration,
+    progress: Callable[[Progress], object] | None = None,
+    cancel: threading.Event | None = None,
+    began: float | None = None,
+) -> Run:
+    """Take steps until the iteration is done, or told to stop, and close it; parameters as for `iterate`."""
+    began = told = time.perf_counter() if began is None else began
+    from_share = _share(iteration)
     try:
         while not iteration.done:
             if cancel is not None and cancel.is_set():
@@ -501,25 +637,32 @@ def iterate(
                 now = time.perf_counter()
                 if now - told >= _PROGRESS_EVERY:
                     told = now
-                    progress(_progress(iteration, now - began))
+                    progress(_progress(iteration, now - began, from_share))
     except KeyboardInterrupt:
         pass  # the step was undone; what is left is a valid partial run
+    finally:
+        iteration.close()
     run = iteration.run()
     if progress is not None:
-        progress(_progress(iteration, time.perf_counter() - began, ended=True))
+        progress(_progress(iteration, time.perf_counter() - began, from_share, ended=True))
     return run
 
 
-def _progress(iteration: Iteration, seconds: float, *, ended: bool = False) -> Progress:
-    """Estimate from what is done. Work on a window is proportional to its rows times n, so it shrinks quadratically."""
-    n, hi = iteration.n, iteration.window[1]
-    share = 1.0 if iteration.done and hi == 0 else 1.0 - (hi / n) ** 2
-    forecast = seconds * (1.0 - share) / share if share > 0.02 and not ended else None
+def _share(iteration: Iteration) -> float:
+    """Estimate of what is done. Work on a window is proportional to its rows times n, so it shrinks quadratically."""
+    hi = iteration.window[1]
+    return 1.0 if iteration.done and hi == 0 else 1.0 - (hi / iteration.n) ** 2
+
+
+def _progress(iteration: Iteration, seconds: float, from_share: float, *, ended: bool = False) -> Progress:
+    share = _share(iteration)
+    gained = share - from_share  # in these seconds; the rest was there before
+    forecast = seconds * (1.0 - share) / gained if gained > 0.02 and not ended else None
     return Progress(
         phase="done" if ended else "iterate",
         sweeps=iteration.sweeps,
         window=iteration.window,
-        deflated=n - hi,
+        deflated=iteration.n - iteration.window[1],
         share=share,
         seconds=seconds,
         forecast=forecast,
@@ -561,17 +704,15 @@ def _resolve(
             "the given shifts are not closed under conjugation; add the conjugates or use form='complex'"
         )
     deflation_test(deflation)
-    switches: dict[str, Any] = {"flip": flip, "accumulate": accumulate, "stop_when_stalled": stop_when_stalled}
+    _check_limits(limit, stop_when_stalled)
+    switches: dict[str, Any] = {"flip": flip, "accumulate": accumulate}
     for name, value in switches.items():
-        if not isinstance(value, (bool, np.bool_)):
-            raise SettingsError(f"{name} {value!r} is neither True nor False; give one of them")
+        _check_switch(name, value)
     level: Any = tol  # whatever a caller may have passed
     if level is not None and (
         isinstance(level, bool) or not isinstance(level, Real) or not 0.0 <= float(level) < float("inf")
     ):
         raise SettingsError(f"tol {tol!r} is no level; give a number of at least 0, or None for rounding level")
-    if limit is not None and (isinstance(limit, bool) or not isinstance(limit, (int, np.integer)) or limit < 1):
-        raise SettingsError(f"limit {limit!r} is no number of sweeps; give an integer of at least 1")
     if exceptional is None:
         period = EXCEPTIONAL_PERIOD if getattr(policy, "exceptional", True) else 0
     elif isinstance(exceptional, bool):
@@ -585,6 +726,8 @@ def _resolve(
         options["shifts"] = [[v.real, v.imag] for v in policy.values]
     if isinstance(policy, Francis) and policy.real_pair != "both":
         options["real_pair"] = policy.real_pair
+    if type(policy) not in (*_BUILT_IN, Given):
+        options["own"] = type(policy).__qualname__
     return policy, Settings(
         strategy=str(getattr(policy, "name", type(policy).__name__)),
         form="real" if real else "complex",
@@ -599,6 +742,64 @@ def _resolve(
         keep=_bytes(keep),
         options=options,
     )
+
+
+def _check_switch(name: str, value: Any) -> None:
+    if not isinstance(value, (bool, np.bool_)):
+        raise SettingsError(f"{name} {value!r} is neither True nor False; give one of them")
+
+
+def _check_limits(limit: Any, stop_when_stalled: Any) -> None:
+    _check_switch("stop_when_stalled", stop_when_stalled)
+    if limit is not None and (isinstance(limit, bool) or not isinstance(limit, (int, np.integer)) or limit < 1):
+        raise SettingsError(f"limit {limit!r} is no number of sweeps; give an integer of at least 1")
+
+
+def _recorded_strategy(run: Run, own: ShiftStrategy | None) -> ShiftStrategy:
+    """The strategy that a run was made with, from its settings, or the user's own."""
+    name, options = run.settings.strategy, run.settings.options
+    if "own" in options:
+        if own is None:
+            raise SettingsError(
+                f"the run was made with a strategy of your own, {name} ({options['own']}), which is not in the record; "
+                "pass it again as strategy="
+            )
+        if isinstance(own, str) or not callable(getattr(own, "shifts", None)):
+            raise SettingsError(f"strategy {own!r} has no shifts(view) method; pass the object the run was made with")
+        offered = str(getattr(own, "name", type(own).__name__))
+        if offered != name:
+            raise SettingsError(f"the run was made with strategy {name}, not {offered}; pass the one it was made with")
+        return own
+    if own is not None:
+        raise SettingsError(f"the run goes on with its strategy {name}, which is in the record; leave strategy out")
+    if "shifts" in options:
+        return Given([complex(*pair) for pair in options["shifts"]])
+    if "real_pair" in options:
+        return Francis(options["real_pair"])
+    return strategy_for(name, n=run.n, real=run.settings.form == "real")
+
+
+def _store_to_go_on(run: Run, store: str | Path | bool | None, head: dict[str, Any]) -> RunStore | None:
+    """A store that holds the run so far and takes what follows: the run's own or a new one; None without."""
+    journal = run.journal
+    place = run.store if store is None or isinstance(store, bool) else Path(store)
+    if place is None:
+        return None
+    if run.store is not None and place.resolve() == run.store.resolve():
+        held = RunStore.open(place)
+        held.hold()
+        known, _ = held.steps(run.settings.deflation)
+        if known != journal.steps[: len(known)]:
+            held.close()
+            raise InputError(f"{place} has gone on since this run was opened; open it again and resume that run")
+        held.head = head
+    else:
+        held = RunStore.create(place, run.matrix, run.preparation, journal.checkpoints[0], head)
+    for k in range(held.states, len(journal.windows)):
+        held.add(journal.steps[k - 1] if k else None, journal.windows[k], journal.bands(k))
+    if len(journal.steps) not in held.checkpoints and journal.steps:
+        held.add_checkpoint(len(journal.steps), *run._final)
+    return held
 
 
 _UNITS = {"b": 1, "kib": 2**10, "mib": 2**20, "gib": 2**30, "kb": 10**3, "mb": 10**6, "gb": 10**9, "": 1}

@@ -42,7 +42,7 @@ RANK = {room: rank for rank, together in enumerate(ROOMS) for room in together}
 #: (importing room, imported module): allowed only inside a function, because the name is needed at call time.
 LATE = {("journal", "schurbench.factors")}
 
-HEAVY = ["numba", "llvmlite", "ipywidgets", "bqplot", "pandas", "scipy", "h5py", "IPython", "jupyterlab"]
+HEAVY = ["numba", "llvmlite", "ipywidgets", "bqplot", "pandas", "scipy", "h5py", "zarr", "IPython", "jupyterlab"]
 
 
 def imports_of(path: Path) -> Iterator[tuple[str, bool, int]]:

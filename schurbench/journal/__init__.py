@@ -1,4 +1,5 @@
-"""The record of a run: every step and deflation, checkpoints, any earlier state rebuilt, saved and reopened."""
+"""The record of a run: every step and deflation, checkpoints, any earlier state rebuilt, saved and reopened,
+or kept in a directory while it goes on."""
 
 from __future__ import annotations
 
@@ -15,7 +16,7 @@ from schurbench.journal.records import (
     StopReason,
 )
 from schurbench.journal.run import Run
-from schurbench.journal.store import is_run, open_run
+from schurbench.journal.saved import is_run, open_run
 
 __all__ = [
     "Deflation",

@@ -4,12 +4,16 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 from copy import copy
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from schurbench.journal.records import SPIKE, Deflation, DeflationKind, Step, Window
 from schurbench.measures import Array
 from schurbench.prepare.preparation import single_blas_thread
+
+if TYPE_CHECKING:
+    from schurbench.journal.store import RunStore
 
 __all__ = ["Journal", "replay_step"]
 
@@ -25,14 +29,14 @@ _CHUNK = 64
 
 
 class Journal:
-    """Steps, bands of H after every step, and checkpoints within a byte budget.
+    """Steps, bands of H after every step, and checkpoints within a byte budget; with a store, all of it there as well.
 
     Parameters
     ----------
     H, Qh : arrays in the kernels' layout
         The state before the first step; kept as it is, so it must not change.
     keep : int
-        Bytes allowed for checkpoints, and again for the bands.
+        Bytes allowed for checkpoints in memory, and again for the bands.
     """
 
     def __init__(self, H: Array, Qh: Array, window: Window, keep: int) -> None:
@@ -45,72 +49,118 @@ class Journal:
         self.steps: list[Step] = []
         self.windows: list[Window] = [window]
         self.checkpoints: dict[int, tuple[Array, Array]] = {0: (H, Qh)}
+        self.store: RunStore | None = None
         self._distance = _FIRST_DISTANCE
         self._work = 0  # rotations since the last checkpoint
         self._state_bytes = H.nbytes + Qh.nbytes
         self._chunks: list[Array] = []
-        self._banded = 0  # states whose bands are held: 0 … _banded−1
+        self._base = 0  # first state whose bands are in memory; earlier ones are in the store
+        self._banded = 0  # states whose bands are in memory: _base … _base+_banded−1
+        self._last: Array | None = None  # bands of the last state recorded
         self._walk: tuple[int, Array, Array] | None = None  # the last state rebuilt, so that walking forward is cheap
         self._band_bytes = 3 * self.n * self.band_type.itemsize
-        self._keep_bands(H, None)
+
+    @classmethod
+    def begin(cls, H: Array, Qh: Array, window: Window, keep: int, store: RunStore | None = None) -> Journal:
+        """A journal whose only state is the start, with a store to write to or none."""
+        journal = cls(H, Qh, window, keep)
+        journal.store = store
+        journal._keep_bands(H, None)
+        if store is not None and journal._last is not None:
+            store.add(None, window, journal._last)
+        return journal
 
     def add(self, step: Step, H: Array, Qh: Array, window: Window) -> None:
         """Record one finished step and the state it led to."""
         self.steps.append(step)
         self.windows.append(window)
-        if self._banded == step.index:
-            self._keep_bands(H, step)
-        self._work += step.rotations + _WINDOW_WORK * step.rows
+        self._keep_bands(H, step)
+        work = step.rotations + _WINDOW_WORK * step.rows
+        self._work += work
+        copied: tuple[Array, Array] | None = None
         if self._work >= self._distance * self.n:
             self._work = 0
             while len(self.checkpoints) > 1 and not self._room():
                 self._distance *= 2
                 self.checkpoints = {k: self.checkpoints[k] for k in sorted(self.checkpoints)[::2]}
             if self._room():
-                self.checkpoints[step.index] = (H.copy(), Qh.copy())
+                copied = self.checkpoints[step.index] = (H.copy(), Qh.copy())
+        if self.store is not None and self.store.held and self._last is not None:
+            self.store.add(step, window, self._last)
+            if self.store.wants_checkpoint(work, self.n):
+                self.store.add_checkpoint(step.index, *(copied or (H.copy(), Qh.copy())))
 
     def _room(self) -> bool:
         """Whether one more checkpoint fits in the budget."""
         return (len(self.checkpoints) + 1) * self._state_bytes <= self.keep
 
     def _keep_bands(self, H: Array, step: Step | None) -> None:
-        chunk, slot = divmod(self._banded, _CHUNK)
-        if slot == 0:
-            if self._chunks and len(self._chunks) * _CHUNK * self._band_bytes >= self.keep:
-                return  # later bands are rebuilt by replay when someone asks
-            self._chunks.append(np.empty((_CHUNK, 3, self.n), dtype=self.band_type))
-        out = self._chunks[-1][slot]
+        """Take the bands of the state after the step, for memory as long as there is room, and for the store."""
+        state = 0 if step is None else step.index
+        slot = self._banded % _CHUNK
+        fits = state == self._base + self._banded and (
+            slot > 0 or not self._chunks or len(self._chunks) * _CHUNK * self._band_bytes < self.keep
+        )
+        if fits:
+            if slot == 0:
+                self._chunks.append(np.empty((_CHUNK, 3, self.n), dtype=self.band_type))
+            out: Array = self._chunks[-1][slot]
+            self._banded += 1
+        elif self.store is not None and self.store.held:
+            out = np.empty((3, self.n), dtype=self.band_type)
+        else:
+            self._last = None
+            return  # later bands are rebuilt by replay when someone asks
         lo, hi = 0, self.n
-        if step is not None and not step.deflations:  # nothing outside the window of the step has changed
-            out[:] = self._chunks[-1][slot - 1] if slot else self._chunks[chunk - 1][-1]
+        if step is not None and not step.deflations and self._last is not None:
+            out[:] = self._last  # nothing outside the window of the step has changed
             lo, hi = max(0, step.window[0] - 1), step.window[1]
         self._copy_bands(H, lo, hi, out)
-        self._banded += 1
+        self._last = out
 
     @property
     def held(self) -> int:
-        """States whose bands are in memory, 0 … held−1; later ones are rebuilt by replay."""
-        return self._banded
+        """States whose bands are in memory or in the store, 0 … held−1; later ones are rebuilt by replay."""
+        stored = self.store.states if self.store is not None else 0
+        return max(stored, self._base + self._banded) if self._base <= stored else stored
 
     def bands(self, k: int) -> Array:
         """Diagonal, subdiagonal and superdiagonal of H after step k, shape (3, n); the last two end with 0."""
-        if k < self._banded:
-            held: Array = self._chunks[k // _CHUNK][k % _CHUNK]
+        if self._base <= k < self._base + self._banded:
+            chunk, slot = divmod(k - self._base, _CHUNK)
+            held: Array = self._chunks[chunk][slot]
             return held
+        if self.store is not None:
+            if k >= self.store.states:
+                self.store.flush()
+            if k < self.store.states:
+                return self.store.bands(k)
         H, _ = self.rebuild(k)
         out = np.empty((3, self.n), dtype=self.band_type)
         self._copy_bands(H, 0, self.n, out)
         return out
 
+    @property
+    def checkpoint_steps(self) -> list[int]:
+        """States that are kept whole, in memory or in the store."""
+        stored = self.store.checkpoints if self.store is not None else []
+        return sorted({*self.checkpoints, *(k for k in stored if k <= len(self.steps))})
+
+    def checkpoint(self, k: int) -> tuple[Array, Array]:
+        """H and Zᴴ after step k, one of `checkpoint_steps`; not to be changed."""
+        if k in self.checkpoints or self.store is None:
+            return self.checkpoints[k]
+        return self.store.checkpoint(k)
+
     def rebuild(self, k: int) -> tuple[Array, Array]:
         """H and Zᴴ after step k in the kernels' layout, bit for bit; the caller may keep but not change them."""
         from schurbench.kernels import Workspace
 
-        start = max(i for i in self.checkpoints if i <= k)
+        start = max(i for i in self.checkpoint_steps if i <= k)
         if self._walk is not None and start <= self._walk[0] <= k:
             start, H, Qh = self._walk
         else:
-            H, Qh = self.checkpoints[start]
+            H, Qh = self.checkpoint(start)
         if start == k:
             return H, Qh
         H, Qh = H.copy(), Qh.copy()
@@ -125,10 +175,11 @@ class Journal:
         return H, Qh
 
     def all_bands(self) -> Array:
-        """Bands of every state held in memory, shape (states, 3, n)."""
-        if not self._chunks:
+        """Bands of the first states, as many as are held and the budget allows, shape (states, 3, n)."""
+        count = min(self.held, _CHUNK * -(-max(1, self.keep) // (_CHUNK * self._band_bytes)))
+        if not count:
             return np.empty((0, 3, self.n), dtype=self.band_type)
-        return np.concatenate(self._chunks)[: self._banded]
+        return np.stack([self.bands(k) for k in range(count)])
 
     def snapshot(self) -> Journal:
         """A journal of its own with what is recorded so far; the arrays, which no one changes, are shared."""
@@ -139,6 +190,24 @@ class Journal:
         twin._chunks = list(self._chunks)
         twin._walk = None
         return twin
+
+    def continued(self) -> Journal:
+        """A journal of its own that more steps can be added to, whatever becomes of this one."""
+        twin = self.snapshot()
+        if twin._banded % _CHUNK:
+            twin._chunks[-1] = twin._chunks[-1].copy()  # others may write into the rest of it
+        if twin._base + twin._banded < len(twin.windows) <= self.held:  # the last ones are in the store only
+            twin._base, twin._banded, twin._chunks = len(twin.windows), 0, []
+        twin._last = None
+        return twin
+
+    @classmethod
+    def from_store(cls, store: RunStore, steps: list[Step], windows: list[Window], keep: int) -> Journal:
+        """What a store holds; only the start is brought into memory."""
+        journal = cls(*store.checkpoint(0), windows[0], keep)
+        journal.store, journal.steps, journal.windows = store, steps, windows
+        journal._base = len(windows)
+        return journal
 
     @classmethod
     def from_parts(

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import threading
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
@@ -14,13 +15,24 @@ import numpy.typing as npt
 from schurbench.errors import SettingsError
 from schurbench.intake import WorkingMatrix
 from schurbench.journal.journal import Journal
-from schurbench.journal.records import Deflation, Rotation, Settings, State, Step, Stop, StopReason, Window
+from schurbench.journal.records import (
+    Deflation,
+    Progress,
+    Rotation,
+    Settings,
+    State,
+    Step,
+    Stop,
+    StopReason,
+    Window,
+)
 from schurbench.journal.rotations import Rotations
 from schurbench.measures import Array, frobenius
 from schurbench.prepare.preparation import Preparation
 
 if TYPE_CHECKING:
     from schurbench.factors import Factors
+    from schurbench.policy import ShiftStrategy
 
 __all__ = ["Run"]
 
@@ -46,7 +58,8 @@ class Run:
         Seconds spent in ``"reduce"``, ``"iterate"`` and ``"compile"``; the last is that of the kernels, on the first run of
         a process.
     environment : dict
-        Versions, BLAS, threads and processor the run was made with.
+        Versions, BLAS, threads and processor the run was made with. After `resume`, ``"continued"`` lists those of each
+        continuation with the state it went on from (``"after_step"``).
     """
 
     matrix: WorkingMatrix
@@ -197,6 +210,63 @@ class Run:
 
         return assemble(self)
 
+    @property
+    def store(self) -> Path | None:
+        """Directory that holds the run, or None when it is in memory or in a file."""
+        return self.journal.store.path if self.journal.store is not None else None
+
+    def resume(
+        self,
+        limit: int | None = None,
+        stop_when_stalled: bool | None = None,
+        progress: Callable[[Progress], object] | None = None,
+        cancel: threading.Event | None = None,
+        *,
+        store: str | Path | bool | None = None,
+        strategy: ShiftStrategy | None = None,
+    ) -> Run:
+        """Go on from the last state, to the same bytes as if the run had never stopped.
+
+        Parameters
+        ----------
+        limit : int, optional
+            Largest number of sweeps of the whole run. By default that of the run, or as many again when they are used up.
+        stop_when_stalled : bool, optional
+            By default as it was, but False when that is what the run stopped for.
+        progress : callable, optional
+        cancel : threading.Event, optional
+            As for `schurbench.iterate`.
+        store : str, Path or False, optional
+            Where to record: by default in the directory that holds the run, if one does; False for in memory only, or
+            another directory for the whole run.
+        strategy : ShiftStrategy, optional
+            A strategy of one's own, which no record can bring back; only for a run that was made with one.
+
+        Returns
+        -------
+        Run
+            The whole run, earlier steps included. This one is unchanged.
+
+        Raises
+        ------
+        SettingsError
+            The run has converged, its sweeps would spoil the factors, or the limit is used up; the strategy is missing,
+            superfluous or another one.
+        InputError
+            The directory cannot be written, is in use, or has gone on since this run was opened.
+
+        Notes
+        -----
+        Under other library versions, or on another kind of processor, the steps that follow may differ in their last bits
+        from those of an uninterrupted run. Both environments are recorded.
+        """
+        from schurbench.iteration import Iteration, drive
+
+        iteration = Iteration.continue_from(
+            self, limit=limit, stop_when_stalled=stop_when_stalled, store=store, strategy=strategy
+        )
+        return drive(iteration, progress, cancel)
+
     def save(self, path: str | Path, *, replace: bool = False) -> Path:
         """Write the run, its matrix included, to one file that `open_run` reads.
 
@@ -205,7 +275,7 @@ class Run:
         InputError
             The file exists and ``replace`` is not set, or it cannot be written.
         """
-        from schurbench.journal.store import save_run
+        from schurbench.journal.saved import save_run
 
         return save_run(self, Path(path), replace=replace)
 

@@ -103,6 +103,7 @@ class Iteration:
     _fresh: bool  # nothing has been scanned yet
     _sweeps: int
     _waited: int
+    _store: RunStore | None  # the one to write to; the journal may read an older one
 
     def __init__(
         self,
@@ -204,7 +205,7 @@ class Iteration:
         self._view = WindowView(self._H)
         self._trusted = type(self._strategy) in _BUILT_IN
         self._stop: Stop | None = None
-        self._store: RunStore | None = None  # the one to write to; the journal may read an older one
+        self._store = None
         self._closed = False
         self._recall()
         # the first measurement that is due now, unless it was made at an earlier step, or later
@@ -330,7 +331,7 @@ class Iteration:
         if self._store is None:
             return
         if self._store.held:
-            self._store.flush()
+            self._store.settle()
             self._store.head = self._head(self._stop or self._stopped_by_hand())
             self._store.add_checkpoint(len(self._journal.steps), self._H, self._Qh)
         self._store.close()

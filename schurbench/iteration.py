@@ -7,12 +7,10 @@ order.
 
 from __future__ import annotations
 
-import cmath
 import threading
 import time
 from collections.abc import Callable, Sequence
 from dataclasses import asdict, replace
-from numbers import Real
 from pathlib import Path
 from typing import Any
 
@@ -27,7 +25,6 @@ from schurbench.journal.records import (
     Deflation,
     DeflationKind,
     Progress,
-    Settings,
     Step,
     StepKind,
     Stop,
@@ -38,20 +35,15 @@ from schurbench.journal.run import Run
 from schurbench.journal.store import RunStore, require_free
 from schurbench.measures import RATIO_LIMIT, Array, frobenius, orthogonality_ratio, residual_ratio
 from schurbench.policy import (
-    EXCEPTIONAL_PERIOD,
-    Francis,
-    Given,
-    Multishift,
-    Rayleigh,
+    BUILT_IN,
     ShiftStrategy,
-    Wilkinson,
     WindowView,
-    Zero,
+    checked_proposal,
     deflation_test,
     exceptional_shifts,
-    strategy_for,
 )
-from schurbench.prepare.preparation import BALANCE_CHOICES, prepare, single_blas_thread
+from schurbench.prepare.preparation import prepare, single_blas_thread
+from schurbench.settings import check_limits, recorded_strategy, resolve
 
 __all__ = ["Iteration", "drive", "iterate"]
 
@@ -59,18 +51,12 @@ __all__ = ["Iteration", "drive", "iterate"]
 #: matrices (12 sweeps, double shift, Gaussian matrices of n = 20 to 200).
 STALLED_AFTER = 60
 
-#: Largest single shift accepted, in Frobenius norms of H. No eigenvalue lies beyond one norm, and an explicit step with
-#: shift σ makes rounding errors of size ulp·|σ|, so a larger shift can only spoil the backward error.
-_LARGEST_SHIFT = 4.0
-
 #: Sweeps, in units of n, before rounding in H and Z is measured for the first time, and between two measurements. Runs that
 #: converge need less than 6 n (3.4 n is usual for single shifts); a measurement costs three matrix products.
 _ROUNDING_FIRST, _ROUNDING_EVERY = 6, 2
 
 #: Longest interval between two progress calls, seconds; more often would cost more than it tells.
 _PROGRESS_EVERY = 0.05
-
-_BUILT_IN = (Zero, Rayleigh, Wilkinson, Francis, Multishift)
 
 _KINDS = {
     (True, 1): StepKind.SINGLE,
@@ -125,7 +111,7 @@ class Iteration:
     ) -> None:
         directory = None if store is None else require_free(store)
         self.matrix: WorkingMatrix = load(matrix)
-        self._strategy, self.settings = _resolve(
+        self._strategy, self.settings = resolve(
             self.matrix, strategy, form, balance, flip, deflation, tol, exceptional, accumulate, limit,
             stop_when_stalled, keep, shifts,
         )  # fmt: skip
@@ -161,12 +147,12 @@ class Iteration:
             )
         self = cls.__new__(cls)
         self.matrix, self.preparation = run.matrix, run.preparation
-        self._strategy = _recorded_strategy(run, strategy)
+        self._strategy = recorded_strategy(run, strategy)
         if limit is None:
             limit = run.settings.limit if run.sweeps < run.settings.limit else run.sweeps + run.settings.limit
         if stop_when_stalled is None:
             stop_when_stalled = run.settings.stop_when_stalled and run.stop.reason is not StopReason.STALLED
-        _check_limits(limit, stop_when_stalled)
+        check_limits(limit, stop_when_stalled)
         self.settings = replace(run.settings, limit=int(limit), stop_when_stalled=bool(stop_when_stalled))
         self._phases = dict(run.phases)
         now = environment()
@@ -203,7 +189,7 @@ class Iteration:
         self._test = deflation_test(self.settings.deflation)
         self._tol = -1.0 if self.settings.tol is None else self.settings.tol
         self._view = WindowView(self._H)
-        self._trusted = type(self._strategy) in _BUILT_IN
+        self._trusted = type(self._strategy) in BUILT_IN
         self._stop: Stop | None = None
         self._store = None
         self._closed = False
@@ -440,40 +426,8 @@ class Iteration:
             return exceptional_shifts(view, turn, len(ordinary), self._real), True
         shifts = self._strategy.shifts(view)
         if not self._trusted:
-            shifts = self._checked(shifts)
+            shifts = checked_proposal(shifts, self._real, self._norm)
         return tuple([complex(s) for s in shifts]), False
-
-    def _checked(self, shifts: Sequence[complex]) -> Sequence[complex]:
-        """What a strategy of the user's own, or a list of shifts, may propose."""
-        try:
-            values = [complex(s) for s in shifts]
-        except (TypeError, ValueError):
-            raise SettingsError(f"the strategy proposed {shifts!r}; return a sequence of one or two numbers") from None
-        if not values or (self._real and len(values) > 1 and len(values) % 2):
-            raise SettingsError(
-                f"the strategy proposed {len(values)} shifts; return one or two, or in real form an even number"
-            )
-        if not all(cmath.isfinite(v) for v in values):
-            raise SettingsError("the strategy proposed a shift that is NaN or infinite; return finite numbers")
-        pairs = [values[i : i + 2] for i in range(0, len(values), 2)] if self._real else []
-        if any(
-            len(pair) == 2 and (pair[0].imag != 0.0 or pair[1].imag != 0.0) and pair[0] != pair[-1].conjugate()
-            for pair in pairs
-        ):
-            raise SettingsError(
-                "the strategy proposed complex shifts that are no conjugate pair; return pairs or use form='complex'"
-            )
-        if any(len(pair) == 1 and pair[0].imag != 0.0 for pair in pairs):
-            raise SettingsError(
-                "the strategy proposed one complex shift in real form; return its conjugate too or use form='complex'"
-            )
-        largest = max(abs(v) for v in values)
-        if largest > _LARGEST_SHIFT * self._norm:
-            raise SettingsError(
-                f"a shift of magnitude {largest:.3g} is {largest / self._norm if self._norm else float('inf'):.3g} times the "
-                f"norm of H; no eigenvalue lies beyond 1, so choose shifts within {_LARGEST_SHIFT:g} norms"
-            )
-        return values
 
     def _scan(self, index: int, out: list[Deflation], *, before: bool) -> None:
         """Split off whatever is negligible at the bottom of the window, and move the window up."""
@@ -670,116 +624,6 @@ def _progress(iteration: Iteration, seconds: float, from_share: float, *, ended:
     )
 
 
-def _resolve(
-    matrix: WorkingMatrix,
-    strategy: str | ShiftStrategy,
-    form: str,
-    balance: str,
-    flip: bool,
-    deflation: str,
-    tol: float | None,
-    exceptional: bool | int | None,
-    accumulate: bool,
-    limit: int | None,
-    stop_when_stalled: bool,
-    keep: str | int,
-    shifts: Sequence[complex] | None,
-) -> tuple[ShiftStrategy, Settings]:
-    """Settings as they will be carried out; everything that cannot be is refused here, before any work."""
-    if form not in ("auto", "real", "complex"):
-        raise SettingsError(f"form {form!r} is unknown; choose 'auto', 'real' or 'complex'")
-    if balance not in BALANCE_CHOICES:
-        raise SettingsError(f"balance {balance!r} is unknown; choose one of {', '.join(BALANCE_CHOICES)}")
-    if form == "real" and not matrix.is_real:
-        raise SettingsError("a complex matrix has no real Schur form; use form='complex' or form='auto'")
-    real = matrix.is_real and form != "complex"
-    policy = strategy_for(strategy, n=matrix.n, real=real, shifts=shifts)
-    if real and form == "auto":
-        real = getattr(policy, "form", "real") == "real"
-    if real and isinstance(policy, Wilkinson) and not np.array_equal(matrix.array, matrix.array.T):
-        raise SettingsError(
-            "wilkinson shifts of a real matrix that is not symmetric may be complex; use form='complex' or strategy 'francis'"
-        )
-    if real and isinstance(policy, Given) and policy.form == "complex":
-        raise SettingsError(
-            "the given shifts are not closed under conjugation; add the conjugates or use form='complex'"
-        )
-    deflation_test(deflation)
-    _check_limits(limit, stop_when_stalled)
-    switches: dict[str, Any] = {"flip": flip, "accumulate": accumulate}
-    for name, value in switches.items():
-        _check_switch(name, value)
-    level: Any = tol  # whatever a caller may have passed
-    if level is not None and (
-        isinstance(level, bool) or not isinstance(level, Real) or not 0.0 <= float(level) < float("inf")
-    ):
-        raise SettingsError(f"tol {tol!r} is no level; give a number of at least 0, or None for rounding level")
-    if exceptional is None:
-        period = EXCEPTIONAL_PERIOD if getattr(policy, "exceptional", True) else 0
-    elif isinstance(exceptional, bool):
-        period = EXCEPTIONAL_PERIOD if exceptional else 0
-    elif isinstance(exceptional, (int, np.integer)) and exceptional >= 0:
-        period = int(exceptional)
-    else:
-        raise SettingsError(f"exceptional {exceptional!r} is unknown; give True, False or a number of sweeps")
-    options: dict[str, Any] = {}
-    if isinstance(policy, Given):
-        options["shifts"] = [[v.real, v.imag] for v in policy.values]
-    if isinstance(policy, Francis) and policy.real_pair != "both":
-        options["real_pair"] = policy.real_pair
-    if type(policy) not in (*_BUILT_IN, Given):
-        options["own"] = type(policy).__qualname__
-    return policy, Settings(
-        strategy=str(getattr(policy, "name", type(policy).__name__)),
-        form="real" if real else "complex",
-        balance=balance,
-        flip=bool(flip),
-        deflation=deflation,
-        tol=None if tol is None else float(tol),
-        exceptional=period,
-        accumulate=bool(accumulate),
-        limit=30 * max(10, matrix.n) if limit is None else int(limit),
-        stop_when_stalled=bool(stop_when_stalled),
-        keep=_bytes(keep),
-        options=options,
-    )
-
-
-def _check_switch(name: str, value: Any) -> None:
-    if not isinstance(value, (bool, np.bool_)):
-        raise SettingsError(f"{name} {value!r} is neither True nor False; give one of them")
-
-
-def _check_limits(limit: Any, stop_when_stalled: Any) -> None:
-    _check_switch("stop_when_stalled", stop_when_stalled)
-    if limit is not None and (isinstance(limit, bool) or not isinstance(limit, (int, np.integer)) or limit < 1):
-        raise SettingsError(f"limit {limit!r} is no number of sweeps; give an integer of at least 1")
-
-
-def _recorded_strategy(run: Run, own: ShiftStrategy | None) -> ShiftStrategy:
-    """The strategy that a run was made with, from its settings, or the user's own."""
-    name, options = run.settings.strategy, run.settings.options
-    if "own" in options:
-        if own is None:
-            raise SettingsError(
-                f"the run was made with a strategy of your own, {name} ({options['own']}), which is not in the record; "
-                "pass it again as strategy="
-            )
-        if isinstance(own, str) or not callable(getattr(own, "shifts", None)):
-            raise SettingsError(f"strategy {own!r} has no shifts(view) method; pass the object the run was made with")
-        offered = str(getattr(own, "name", type(own).__name__))
-        if offered != name:
-            raise SettingsError(f"the run was made with strategy {name}, not {offered}; pass the one it was made with")
-        return own
-    if own is not None:
-        raise SettingsError(f"the run goes on with its strategy {name}, which is in the record; leave strategy out")
-    if "shifts" in options:
-        return Given([complex(*pair) for pair in options["shifts"]])
-    if "real_pair" in options:
-        return Francis(options["real_pair"])
-    return strategy_for(name, n=run.n, real=run.settings.form == "real")
-
-
 def _store_to_go_on(run: Run, store: str | Path | bool | None, head: dict[str, Any]) -> RunStore | None:
     """A store that holds the run so far and takes what follows: the run's own or a new one; None without."""
     journal = run.journal
@@ -801,24 +645,6 @@ def _store_to_go_on(run: Run, store: str | Path | bool | None, head: dict[str, A
     if len(journal.steps) not in held.checkpoints and journal.steps:
         held.add_checkpoint(len(journal.steps), *run._final)
     return held
-
-
-_UNITS = {"b": 1, "kib": 2**10, "mib": 2**20, "gib": 2**30, "kb": 10**3, "mb": 10**6, "gb": 10**9, "": 1}
-
-
-def _bytes(keep: str | int) -> int:
-    if isinstance(keep, (int, np.integer)) and not isinstance(keep, bool) and keep >= 0:
-        return int(keep)
-    if isinstance(keep, str):
-        number = keep.strip().lower().rstrip("kmgib ")
-        unit = keep.strip().lower()[len(number) :].strip()
-        try:
-            amount = float(number) * _UNITS[unit]
-            if 0 <= amount < float("inf"):
-                return int(amount)
-        except (ValueError, KeyError):
-            pass
-    raise SettingsError(f"keep {keep!r} is no amount of memory; write for example '256 MiB'")
 
 
 def _count(number: int, noun: str) -> str:

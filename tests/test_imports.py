@@ -30,7 +30,7 @@ ROOMS = [
     ("prepare",),
     ("kernels",),
     ("policy",),
-    ("iteration", "journal"),
+    ("iteration", "journal", "settings"),
     ("diagnosis",),
     ("comparison",),
     ("factors",),

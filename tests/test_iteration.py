@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import threading
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 
 import numpy as np
@@ -66,6 +67,16 @@ def test_states_out_of_order_and_across_checkpoints(strategy: str, complex_: boo
         rich.state(len(rich.steps) + 1)
     with pytest.raises(ValueError, match="read-only"):
         rich.state(2).H[0, 0] = 1.0
+
+
+def test_states_asked_for_in_several_threads() -> None:
+    run = sb.iterate(gaussian(60, 8))
+    alone = [run.state(k).H for k in range(len(run.steps) + 1)]
+    again = sb.iterate(gaussian(60, 8))
+    with ThreadPoolExecutor(4) as threads:
+        order = np.random.default_rng(0).permutation(len(alone)).tolist()
+        for k, state in zip(order, threads.map(again.state, order), strict=True):
+            np.testing.assert_array_equal(state.H, alone[k])
 
 
 def test_checkpoints_stay_within_their_budget() -> None:

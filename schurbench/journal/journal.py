@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 from copy import copy
+from threading import RLock
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -58,6 +59,7 @@ class Journal:
         self._banded = 0  # states whose bands are in memory: _base … _base+_banded−1
         self._last: Array | None = None  # bands of the last state recorded
         self._walk: tuple[int, Array, Array] | None = None  # the last state rebuilt, so that walking forward is cheap
+        self._replaying = RLock()  # a page paints states in one thread while another asks for some
         self._band_bytes = 3 * self.n * self.band_type.itemsize
 
     @classmethod
@@ -154,6 +156,10 @@ class Journal:
 
     def rebuild(self, k: int) -> tuple[Array, Array]:
         """H and Zᴴ after step k in the kernels' layout, bit for bit; the caller may keep but not change them."""
+        with self._replaying:
+            return self._rebuild(k)
+
+    def _rebuild(self, k: int) -> tuple[Array, Array]:
         from schurbench.kernels import Workspace
 
         start = max(i for i in self.checkpoint_steps if i <= k)
@@ -184,6 +190,7 @@ class Journal:
     def snapshot(self) -> Journal:
         """A journal of its own with what is recorded so far; the arrays, which no one changes, are shared."""
         twin = copy(self)
+        twin._replaying = RLock()
         twin.steps = list(self.steps)
         twin.windows = list(self.windows)
         twin.checkpoints = dict(self.checkpoints)

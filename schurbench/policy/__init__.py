@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from schurbench.policy.choose import MULTISHIFT_FROM, STRATEGIES, strategy_for
+from schurbench.policy.choose import BUILT_IN, MULTISHIFT_FROM, STRATEGIES, strategy_for
 from schurbench.policy.deflation import DEFLATION_TESTS, DeflationTest, deflation_test
 from schurbench.policy.exceptional import EXCEPTIONAL_PERIOD, exceptional_shifts
 from schurbench.policy.multishift import Multishift
+from schurbench.policy.proposals import checked_proposal
 from schurbench.policy.strategies import (
     Francis,
     Given,
@@ -17,6 +18,7 @@ from schurbench.policy.strategies import (
 )
 
 __all__ = [
+    "BUILT_IN",
     "DEFLATION_TESTS",
     "EXCEPTIONAL_PERIOD",
     "MULTISHIFT_FROM",
@@ -30,6 +32,7 @@ __all__ = [
     "Wilkinson",
     "WindowView",
     "Zero",
+    "checked_proposal",
     "deflation_test",
     "exceptional_shifts",
     "strategy_for",

@@ -8,10 +8,13 @@ from schurbench.errors import SettingsError
 from schurbench.policy.multishift import Multishift
 from schurbench.policy.strategies import Francis, Given, Rayleigh, ShiftStrategy, Wilkinson, Zero
 
-__all__ = ["MULTISHIFT_FROM", "STRATEGIES", "strategy_for"]
+__all__ = ["BUILT_IN", "MULTISHIFT_FROM", "STRATEGIES", "strategy_for"]
 
 #: Order from which ``auto`` takes many shifts a sweep; below, single and double shifts are as fast (tests/benchmarks).
 MULTISHIFT_FROM = 256
+
+#: Strategies whose proposals need no check: they cannot be anything but usable.
+BUILT_IN = (Zero, Rayleigh, Wilkinson, Francis, Multishift)
 
 STRATEGIES = ("auto", "zero", "rayleigh", "wilkinson", "francis", "multishift", "given")
 

@@ -87,6 +87,32 @@ def test_help_names_the_settings_there_are(capsys: pytest.CaptureFixture[str]) -
         assert name in text
 
 
+def test_run_goes_on_with_a_run_that_stopped(data: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    source = str(data / "west0067.mtx")
+    first, second, whole = tmp_path / "first.npz", tmp_path / "second.npz", tmp_path / "whole.npz"
+    assert main(["run", source, "-o", str(first), "--limit", "25"]) == 3
+    assert main(["run", str(first), "-o", str(second), "--limit", "2010"]) == 0
+    assert main(["run", source, "-o", str(whole)]) == 0
+    went_on, at_once = sb.open_run(second), sb.open_run(whole)
+    np.testing.assert_array_equal(went_on.state(len(went_on.steps)).H, at_once.state(len(at_once.steps)).H)
+    capsys.readouterr()
+    assert main(["run", str(first), "-o", str(tmp_path / "other.npz"), "--strategy", "zero"]) == 2
+    assert "only --limit can" in capsys.readouterr().err
+    assert main(["run", source]) == 2
+    assert "-o RUN" in capsys.readouterr().err
+
+
+def test_run_in_a_directory(data: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    source, place = str(data / "west0067.mtx"), tmp_path / "recorded"
+    assert main(["run", source, "--store", str(place), "--limit", "25"]) == 3
+    assert main(["explain", str(place)]) == 0
+    assert main(["run", str(place), "--limit", "2010"]) == 0
+    assert sb.open_run(place).converged
+    assert main(["export", str(place), "-o", str(tmp_path / "factors.npz")]) == 0
+    assert main(["run", source, "--store", str(place)]) == 2
+    assert capsys.readouterr().err.strip().count("\n") == 0
+
+
 def test_version(capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["--version"]) == 0
     assert capsys.readouterr().out == f"schurbench {sb.__version__}\n"

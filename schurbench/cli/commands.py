@@ -47,21 +47,53 @@ def profile(args: argparse.Namespace, console: Console) -> int:
 
 
 def run(args: argparse.Namespace, console: Console) -> int:
-    """Iterate on FILE and save the run."""
-    _require_free([args.out], args.replace, args.file)
-    m = _load(args)
+    """Iterate on FILE, or go on with RUN, and save the run."""
+    going_on = _is_run(args.file)
+    if args.out is None and args.store is None and not args.file.is_dir():
+        raise SettingsError("nothing says where the run is to be kept; give -o RUN, or --store DIR for a directory")
+    if args.out is not None:
+        _require_free([args.out], args.replace, args.file)
     with interruptible() as cancel:  # around the saving too: a late Ctrl-C must not cost the run
-        result = _iterate(
-            m, args, console, cancel, accumulate=not args.no_vectors, stop_when_stalled=args.stop_when_stalled
-        )
-        result.save(args.out, replace=args.replace)
+        if going_on:
+            result = _go_on(args, console, cancel)
+        else:
+            result = _iterate(
+                _load(args),
+                args,
+                console,
+                cancel,
+                accumulate=not args.no_vectors,
+                stop_when_stalled=args.stop_when_stalled,
+                store=args.store,
+            )
+        if args.out is not None:
+            result.save(args.out, replace=args.replace)
     if args.json:
         console.json(result.to_dict())
     else:
-        introduce(m, console)
+        introduce(result.matrix, console)
         describe_run(result, console)
-        console.say(f"Saved to {args.out}.")
+        console.say(f"Saved to {' and '.join(str(place) for place in (args.out, result.store) if place is not None)}.")
     return _code(result)
+
+
+def _go_on(args: argparse.Namespace, console: Console, cancel: Event) -> Run:
+    """The run in RUN, continued from where it stopped."""
+    import schurbench as sb
+
+    fixed = [name for name in ("key", "labels", *SETTINGS) if name != "limit"]
+    unused = [f"--{name}" for name in fixed if getattr(args, name, None) is not None]
+    unused += ["--no-vectors"] if args.no_vectors else []
+    if unused:
+        raise SettingsError(f"{args.file} is a run, which {', '.join(unused)} cannot change; only --limit can")
+    earlier = sb.open_run(args.file)
+    return earlier.resume(
+        limit=args.limit,
+        stop_when_stalled=args.stop_when_stalled or None,
+        store=args.store,
+        progress=console.progress(earlier.n),
+        cancel=cancel,
+    )
 
 
 def explain(args: argparse.Namespace, console: Console) -> int:
@@ -271,7 +303,7 @@ def _settings(args: argparse.Namespace) -> dict[str, Any]:
 def _is_run(path: Path) -> bool:
     from schurbench.journal import is_run
 
-    return path.is_file() and is_run(path)
+    return path.exists() and is_run(path)
 
 
 def _run_of(args: argparse.Namespace, console: Console, cancel: Event) -> Run:

@@ -65,8 +65,11 @@ def build_parser() -> argparse.ArgumentParser:
 
     add("profile", _positional("FILE", "matrix file"), source, json)
 
-    run = add("run", _positional("FILE", "matrix file"), source, settings, json, replace)
-    run.add_argument("-o", "--out", metavar="RUN", type=Path, required=True, help="where the run is saved (.npz)")
+    run = add("run", _positional("FILE|RUN", "matrix file, or a run to go on with"), source, settings, json, replace)
+    run.add_argument("-o", "--out", metavar="RUN", type=Path, help="where the run is saved (.npz)")
+    run.add_argument(
+        "--store", metavar="DIR", type=Path, help="record the run in a directory as it goes, so that nothing is lost"
+    )
     run.add_argument("--no-vectors", action="store_true", help="do not accumulate Z: faster, but without factors")
     run.add_argument("--stop-when-stalled", action="store_true", help="stop as soon as nothing moves any more")
 

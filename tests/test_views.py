@@ -73,6 +73,19 @@ def test_map_shows_zeros_as_zeros_and_the_rest_as_recorded(gyro: sb.Run) -> None
     np.testing.assert_array_equal(np.isneginf(level[:, -1]), final == 0.0)
 
 
+def test_pooled_map_shows_finished_rows_as_finished() -> None:
+    run = sb.iterate(np.random.default_rng(26).standard_normal((280, 280)))
+    level = views.map_view(run).level
+    assert level.shape[0] == views.PICTURE_SIDE < run.n - 1
+    assert any(event.kind == "pair" for event in run.deflations)
+    assert np.isneginf(level[:, -1]).all()
+    half = len(run.steps) // 2
+    done = views.finished_rows(run, half)
+    column = level[:, (half * level.shape[1]) // (len(run.steps) + 1)]
+    assert np.isneginf(column[-1]) == done[-1]
+    assert np.isfinite(column[0]) == (not done[1])
+
+
 def test_rounding_level_is_lapacks_ulp_times_the_norm(gyro: sb.Run) -> None:
     # LAPACK's dlamch('P') is eps times base, 2^-52 in double precision
     assert views.rounding_level(gyro) == pytest.approx(np.finfo(float).eps * np.linalg.norm(gyro.state(0).H), rel=1e-12)

@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-import ast
 import json
 import os
+import re
 import signal
 import subprocess
 import sys
@@ -441,7 +441,7 @@ def test_the_server_listens_here_only_and_takes_large_uploads(tmp_path: Path) ->
     assert not any("token" in part for part in command)  # the server makes a secret one itself
     limit = next(part for part in command if "websocket_max_message_size" in part)
     assert int(limit.rsplit(": ", 1)[1].rstrip("}")) >= 2000**2 * 16 * 4 // 3  # complex, n = 2000, as text
-    environment = serve.lab_environment(tmp_path / "settings")
+    environment = serve.server_environment(tmp_path / "settings")
     assert environment["JUPYTER_CONFIG_PATH"].startswith(str(tmp_path / "settings"))
     assert (tmp_path / "settings" / "labconfig" / "page_config.json").exists()
 
@@ -451,7 +451,11 @@ def test_a_plain_page_listens_here_only_and_may_load_nothing_from_outside(tmp_pa
     assert str(tmp_path / "a b.ipynb") in command
     assert "--Voila.ip=127.0.0.1" in command
     assert "--Voila.auto_token=True" in command
-    settings = ast.literal_eval(next(part for part in command if "tornado_settings" in part).split("=", 1)[1])
+    assert not any(".token" in part for part in command)  # the server makes a secret one itself
+    serve.server_environment(tmp_path / "settings")
+    settings = json.loads((tmp_path / "settings" / "voila.json").read_text(encoding="utf-8"))["Voila"][
+        "tornado_settings"
+    ]
     assert settings["websocket_max_message_size"] == serve.MESSAGE_LIMIT
     # W3C Content Security Policy level 3, section 6.1.3: default-src stands in for every kind of source not named
     sources = settings["headers"]["Content-Security-Policy"].split(";")[0].split()
@@ -486,26 +490,36 @@ def _gone(group: int) -> bool:
 
 
 @pytest.mark.slow
-@pytest.mark.parametrize("stop", ["keyboard", "interrupt", "terminate"])
-def test_open_serves_the_notebook_on_the_file_until_it_is_stopped(tmp_path: Path, stop: str) -> None:
+@pytest.mark.parametrize(
+    ("stop", "page"), [("keyboard", False), ("interrupt", False), ("terminate", False), ("keyboard", True)]
+)
+def test_open_serves_the_notebook_on_the_file_until_it_is_stopped(tmp_path: Path, stop: str, page: bool) -> None:
+    if page:
+        pytest.importorskip("voila")
     np.save(tmp_path / "mine.npy", np.diag([1.0, 2.0]))
     (tmp_path / "work").mkdir()
-    code = "import sys; from schurbench.panels.serve import open_workbench; sys.exit(open_workbench('../mine.npy', browser=False))"
+    code = (
+        "import sys; from schurbench.panels.serve import open_workbench; "
+        f"sys.exit(open_workbench('../mine.npy', page={page}, browser=False))"
+    )
+    address = "/?token=" if page else "/lab/tree/mine_workbench.ipynb?token="
     with (tmp_path / "log").open("w", encoding="utf-8") as log:
         server = subprocess.Popen(
             [sys.executable, "-c", code], cwd=tmp_path / "work", stdout=log, stderr=log, start_new_session=True
         )
         try:
             until = time.monotonic() + 60.0
-            while "/lab/tree/mine_workbench.ipynb?token=" not in (
-                said := (tmp_path / "log").read_text(encoding="utf-8")
-            ):
+            while address not in (said := (tmp_path / "log").read_text(encoding="utf-8")):
                 assert server.poll() is None, said
                 assert time.monotonic() < until, said
                 time.sleep(0.2)
-            notebook = json.loads((tmp_path / "work" / "mine_workbench.ipynb").read_text(encoding="utf-8"))
-            assert str(tmp_path / "mine.npy") in "".join(notebook["cells"][1]["source"])
-            assert "http://127.0.0.1:" in said
+            name = "mine_workbench_page.ipynb" if page else "mine_workbench.ipynb"
+            notebook = json.loads((tmp_path / "work" / name).read_text(encoding="utf-8"))
+            assert str(tmp_path / "mine.npy") in "".join(notebook["cells"][-1]["source"])
+            assert re.search(
+                r"http://127\.0\.0\.1:\d+/\S*token=[0-9a-f]{32}", said
+            )  # whole, to be copied into a browser
+            assert "tornado_settings" not in said  # a setting handed over in a way the server warns about
         finally:
             if stop == "keyboard":
                 os.killpg(server.pid, signal.SIGINT)  # Ctrl+C in a terminal reaches the whole group
@@ -513,6 +527,15 @@ def test_open_serves_the_notebook_on_the_file_until_it_is_stopped(tmp_path: Path
                 server.send_signal(signal.SIGINT if stop == "interrupt" else signal.SIGTERM)
             server.wait(30)
             assert _gone(server.pid)
+
+
+def test_the_picture_in_the_readme_is_there_and_small() -> None:
+    shown = re.findall(r"!\[[^\]]+\]\(([^)]+)\)", (ROOT / "README.md").read_text(encoding="utf-8"))
+    assert shown
+    for name in shown:
+        content = (ROOT / name).read_bytes()
+        assert content.startswith(b"\x89PNG\r\n\x1a\n")  # W3C PNG specification, third edition, section 5.2
+        assert len(content) < 250_000
 
 
 def test_binder_builds_what_the_project_declares() -> None:

@@ -113,7 +113,7 @@ class Follower:
             page.deflations.show(views.deflation_view(run), run.n, steps)
             page.spectrum.frame(*views.spectrum_limits(run))
             page.scale.value = scale_html(self._limits)
-            page.slider.max = max(1, steps)
+            page.set_last_step(max(1, steps))
             bench.row = None
             target = views.longest_wait(run)
             if bench.cursor == target:

@@ -35,10 +35,19 @@ class Page:
         body = w.HBox([self._main(), self._side], layout=w.Layout(width="100%", align_items="stretch"))
         self.children = (w.HTML(STYLE, layout=w.Layout(display="contents")), self.head, body)
 
+    def set_last_step(self, last: int) -> None:
+        """Let the step cursor go up to ``last``."""
+        if self.slider.max != last:
+            self.slider.max = last
+            # a slider that is shown already keeps its first end for the End key; shown anew, it has the right one
+            self._slider_place.children = []
+            self._slider_place.children = [self.slider]
+
     def _make_track(self) -> None:
         self.track = TrackFigure(TRACK_HEIGHT)
         self.slider = w.IntSlider(min=0, max=1, readout=False, layout=w.Layout(width="auto"), tooltip=_STEP_TIP)
         self.slider.add_class("sb-step")
+        self._slider_place = w.VBox([self.slider])
         self.where = _line("sb-where")
         self.to_start, self.to_last, self.to_next, self.to_longest = (
             w.Button(description=text, tooltip=tip, layout=w.Layout(width="auto"))
@@ -109,7 +118,8 @@ class Page:
             ),
         )
         return w.VBox(
-            [legend, self.track.widget, self.slider, line, panels], layout=w.Layout(flex="1 1 auto", min_width="0")
+            [legend, self.track.widget, self._slider_place, line, panels],
+            layout=w.Layout(flex="1 1 auto", min_width="0"),
         )
 
     def _matrix_cell(self) -> Any:

@@ -17,7 +17,14 @@ from urllib.parse import quote
 from schurbench.errors import InputError, SchurbenchError
 from schurbench.intake import load
 
-__all__ = ["lab_command", "lab_environment", "open_workbench", "page_command", "workbench_notebook", "write_notebook"]
+__all__ = [
+    "lab_command",
+    "open_workbench",
+    "page_command",
+    "server_environment",
+    "workbench_notebook",
+    "write_notebook",
+]
 
 #: Largest message the page may send. A matrix of order 2000 is 32 MB, and uploads travel as text; the default of the
 #: server, 10 MB, drops larger ones without a word.
@@ -33,7 +40,9 @@ _PAGE_POLICY = "default-src 'self' 'unsafe-inline' 'unsafe-eval' data: blob:; fr
 _ANNOUNCEMENTS = "@jupyterlab/apputils-extension:announcements"
 
 
-def workbench_notebook(file: Path | None = None, key: str | None = None, labels: Path | None = None) -> dict[str, Any]:
+def workbench_notebook(
+    file: Path | None = None, key: str | None = None, labels: Path | None = None, page: bool = False
+) -> dict[str, Any]:
     """The notebook that shows the workbench on a file, or on the demonstration plant.
 
     Parameters
@@ -43,6 +52,9 @@ def workbench_notebook(file: Path | None = None, key: str | None = None, labels:
         Array in the file.
     labels : Path, optional
         Text file with the name of one state a line.
+    page : bool
+        For a plain page: without the words about running cells. Its cell ends when the first run has, because what
+        changes while Voilà's page fetches the widgets never reaches it.
 
     Returns
     -------
@@ -56,18 +68,23 @@ def workbench_notebook(file: Path | None = None, key: str | None = None, labels:
         further = "".join(f", {name}={_literal(str(value))}" for name, value in given.items() if value)
         matrix, what = f"sb.load({_literal(str(file))}{further})", "your matrix"
     words = f"Run the cell below (Shift and Enter) for the workbench on {what}; after a restart of the kernel, again."
-    return {
-        "cells": [
-            {"cell_type": "markdown", "id": "words", "metadata": {}, "source": [words]},
-            {
-                "cell_type": "code",
-                "execution_count": None,
-                "id": "workbench",
-                "metadata": {},
-                "outputs": [],
-                "source": ["import schurbench as sb\n", "\n", f"wb = sb.Workbench({matrix})\n", "wb"],
-            },
+    markdown = {"cell_type": "markdown", "id": "words", "metadata": {}, "source": [words]}
+    code = {
+        "cell_type": "code",
+        "execution_count": None,
+        "id": "workbench",
+        "metadata": {},
+        "outputs": [],
+        "source": [
+            "import schurbench as sb\n",
+            "\n",
+            f"wb = sb.Workbench({matrix})\n",
+            *(("wb.wait()\n",) if page else ()),
+            "wb",
         ],
+    }
+    return {
+        "cells": [code] if page else [markdown, code],
         "metadata": {
             "kernelspec": {"display_name": "Python 3 (ipykernel)", "language": "python", "name": "python3"},
             "language_info": {"name": "python"},
@@ -125,9 +142,7 @@ def lab_command(notebook: Path, *, browser: bool = True, extra: tuple[str, ...] 
 
 
 def page_command(notebook: Path, *, browser: bool = True, extra: tuple[str, ...] = ()) -> list[str]:
-    """The command that serves one notebook as a plain page through Voilà: this machine only, with a token, asking
-    nothing outside."""
-    settings = {"websocket_max_message_size": MESSAGE_LIMIT, "headers": {"Content-Security-Policy": _PAGE_POLICY}}
+    """The command that serves one notebook as a plain page through Voilà: this machine only, with a token."""
     return [
         sys.executable,
         "-m",
@@ -136,19 +151,24 @@ def page_command(notebook: Path, *, browser: bool = True, extra: tuple[str, ...]
         "--Voila.ip=127.0.0.1",
         "--Voila.auto_token=True",
         "--VoilaConfiguration.show_tracebacks=True",  # a page has no other place to say what went wrong
-        f"--Voila.tornado_settings={settings!r}",
         *(() if browser else ("--no-browser",)),
         *extra,
     ]
 
 
-def lab_environment(folder: Path) -> dict[str, str]:
-    """The environment for `lab_command`; ``folder`` receives the setting that keeps news banners off the page."""
-    settings = folder / "labconfig"
-    settings.mkdir(parents=True, exist_ok=True)
-    (settings / "page_config.json").write_text(
-        json.dumps({"disabledExtensions": {_ANNOUNCEMENTS: True}}), encoding="utf-8"
-    )
+def server_environment(folder: Path) -> dict[str, str]:
+    """The environment for `lab_command` and `page_command`.
+
+    ``folder`` receives the settings that keep news banners off JupyterLab, and a plain page from asking outside.
+    """
+    page = {"websocket_max_message_size": MESSAGE_LIMIT, "headers": {"Content-Security-Policy": _PAGE_POLICY}}
+    settings: dict[str, dict[str, Any]] = {
+        "labconfig/page_config.json": {"disabledExtensions": {_ANNOUNCEMENTS: True}},
+        "voila.json": {"Voila": {"tornado_settings": page}},
+    }
+    (folder / "labconfig").mkdir(parents=True, exist_ok=True)
+    for name, content in settings.items():
+        (folder / name).write_text(json.dumps(content), encoding="utf-8")
     paths = [str(folder), *filter(None, [os.environ.get("JUPYTER_CONFIG_PATH")])]
     return {**os.environ, "JUPYTER_CONFIG_PATH": os.pathsep.join(paths)}
 
@@ -201,9 +221,8 @@ def open_workbench(
         file, labels = Path(file).resolve(), None if labels is None else Path(labels).resolve()
     elif key is not None or labels is not None:
         raise InputError("an array or labels are named, but no matrix file; name the file they belong to")
-    notebook = workbench_notebook(file, key, labels)
+    notebook = workbench_notebook(file, key, labels, page)
     if page:
-        del notebook["cells"][0]  # how to run a cell: a page has none to run
         stem += "_page"
     with tempfile.TemporaryDirectory(prefix="schurbench-") as scratch:
         try:
@@ -213,7 +232,7 @@ def open_workbench(
             written = write_notebook(notebook, Path(scratch), stem)
         print(f"Workbench notebook: {written}. Stop the server with Ctrl+C.", file=sys.stderr)
         command = page_command(written, browser=browser) if page else lab_command(written, browser=browser)
-        return _until_stopped(subprocess.Popen(command, env=lab_environment(Path(scratch) / "settings")))
+        return _until_stopped(subprocess.Popen(command, env=server_environment(Path(scratch) / "settings")))
 
 
 def _until_stopped(server: subprocess.Popen[bytes]) -> int:

@@ -26,9 +26,9 @@ STYLE = """<style>
 .sb-title b { margin-right: 8px; }
 .sb-title span { margin-right: 8px; white-space: nowrap; color: var(--jp-ui-font-color1); }
 .sb-bench .sb-say.widget-html { height: 48px; min-height: 48px; overflow: hidden; color: var(--jp-ui-font-color1); }
-.sb-trackline { height: 26px; align-items: center; }
+.sb-trackline { height: 32px; align-items: center; }
 .sb-trackline button, .sb-tabs button { flex: 0 0 auto; min-width: max-content; }
-.sb-trackline .sb-where { flex: 1 1 auto; overflow: hidden; white-space: nowrap; text-overflow: ellipsis; }
+.sb-trackline .sb-where { flex: 1 1 auto; max-height: 32px; overflow: hidden; }
 .sb-bench button.jupyter-button { height: 22px; line-height: 22px; font-size: 12px; padding: 0 8px; margin: 0 0 0 4px; }
 .sb-bench .widget-toggle-buttons, .sb-bench .widget-toggle-buttons > div { height: 18px; margin: 0; line-height: 18px; }
 .sb-bench .widget-toggle-buttons button.jupyter-button { height: 18px; line-height: 18px; margin: 0 0 0 4px; }
@@ -40,7 +40,7 @@ STYLE = """<style>
 .sb-side .widget-text, .sb-side .widget-dropdown, .sb-side .widget-checkbox { height: 24px; align-items: center; }
 .sb-bench .widget-html { height: auto; min-height: 0; }
 .sb-side .widget-label, .sb-side .widget-label-basic { font-size: 12px; line-height: 22px; height: 22px; }
-.sb-tabs { flex: 1 1 auto; min-height: 0; }
+.sb-bench .sb-tabs { flex: 1 1 0; height: 0; min-height: 120px; }
 .sb-tabs > .lm-TabBar { overflow: visible; }
 .sb-tabs .lm-TabBar-tab { flex: 1 1 auto !important; min-width: 0 !important; padding: 0 4px !important; }
 .sb-tabs .widget-tab-contents { padding: 6px 2px !important; overflow-y: auto !important; border: 0 !important; }

@@ -273,13 +273,21 @@ def looked_into(run: Run, cursor: int) -> tuple[int, int]:
 
 
 def map_view(run: Run) -> MapView:
-    """Subdiagonal magnitudes of every state of the run."""
+    """Subdiagonal magnitudes of every state of the run.
+
+    Where rows have to be pooled, the entries inside finished 2×2 blocks are left out: every other row has one in real
+    form, and they would hide that everything around them is zero.
+    """
     states = len(run.steps) + 1
     if run.n < 2:
         return MapView(np.full((1, 1), -np.inf))
     table = np.empty((run.n - 1, states))
     for k in range(states):
         table[:, k] = run.subdiagonal(k)
+    if run.n - 1 > PICTURE_SIDE:
+        for event in run.deflations:
+            if event.kind == "pair":
+                table[event.row, event.step :] = 0.0
     return MapView(pool(_log10(table), (PICTURE_SIDE, 2 * PICTURE_SIDE)))
 
 

@@ -14,7 +14,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
-from schurbench.panels.serve import lab_command, lab_environment, page_command
+from schurbench.panels.serve import lab_command, page_command, server_environment
 
 #: Software drawing, no background traffic.
 CHROMIUM_ARGUMENTS = [
@@ -76,7 +76,7 @@ def _free_port() -> int:
 @contextlib.contextmanager
 def _serving(command: list[str], ready: str, folder: Path, scratch: Path) -> Iterator[None]:
     """Run a server in a folder until the block ends, which begins when it answers under ``ready``."""
-    environment = lab_environment(scratch / "settings") | {
+    environment = server_environment(scratch / "settings") | {
         "JUPYTER_CONFIG_DIR": str(scratch / "config"),
         "JUPYTER_DATA_DIR": str(scratch / "data"),
         "JUPYTER_RUNTIME_DIR": str(scratch / "runtime"),

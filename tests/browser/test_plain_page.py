@@ -37,8 +37,7 @@ def plant(tmp_path: Path) -> Path:
 
 
 def test_the_plain_page_works_and_needs_nothing_from_outside(plant: Path, tmp_path: Path, chromium: str) -> None:
-    notebook = workbench_notebook(plant, labels=plant.with_name("states.txt"))
-    del notebook["cells"][0]
+    notebook = workbench_notebook(plant, labels=plant.with_name("states.txt"), page=True)
     written = write_notebook(notebook, tmp_path, "plant_page")
     with page_server(written, tmp_path / "scratch") as address, chromium_page(chromium, 1280, 800) as (page, outside):
         faults: list[str] = []
@@ -65,13 +64,21 @@ def test_the_plain_page_works_and_needs_nothing_from_outside(plant: Path, tmp_pa
         page.get_by_role("tab", name="Factors").click()
         page.get_by_text("Passed:").wait_for(timeout=60 * SECONDS)
 
+        # larger than the 10 MB that the server would take by default, which counts after encoding as text
+        np.save(tmp_path / "large.npy", np.triu(np.ones((1200, 1200))))
+        page.get_by_role("tab", name="Open").click()
+        with page.expect_file_chooser() as chooser:
+            page.get_by_role("button", name="Upload").click()
+        chooser.value.set_files(str(tmp_path / "large.npy"))
+        page.locator(".sb-head").filter(has_text="large: n = 1200").wait_for(timeout=60 * SECONDS)
+
         # what Voilà names outside is stopped by the page's own policy before it is asked for
         assert outside == []
         assert faults == []
 
 
 def test_the_plain_page_is_for_those_who_know_the_token(plant: Path, tmp_path: Path, chromium: str) -> None:
-    written = write_notebook(workbench_notebook(plant), tmp_path, "plant_page")
+    written = write_notebook(workbench_notebook(plant, page=True), tmp_path, "plant_page")
     with page_server(written, tmp_path / "scratch") as address, chromium_page(chromium, 800, 600) as (page, _):
         page.goto(address.split("?")[0])
         assert page.locator(".sb-bench").count() == 0

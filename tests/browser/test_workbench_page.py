@@ -79,6 +79,12 @@ def test_the_whole_job(page: Any, folder: Path) -> None:
     step = int(where.split()[1])
     assert page.locator(".sb-where").inner_text().startswith(f"Step {step + 1} of")
 
+    # also to both ends, and in larger strides
+    last = int(where.split()[3].rstrip(":"))
+    for key, words in (("End", f"Step {last} of {last}"), ("PageDown", f"Step {last - 5} of"), ("Home", "Start:")):
+        page.keyboard.press(key)
+        page.wait_for_function("words => document.querySelector('.sb-where').innerText.startsWith(words)", arg=words)
+
     # a click into a panel chooses a row, which the others mark
     rows = picture(page, 4)
     matrix = page.locator(".sb-bench .bqplot").nth(1)

@@ -47,7 +47,7 @@ class Page:
         self.track = TrackFigure(TRACK_HEIGHT)
         self.slider = w.IntSlider(min=0, max=1, readout=False, layout=w.Layout(width="auto"), tooltip=_STEP_TIP)
         self.slider.add_class("sb-step")
-        self._slider_place = w.VBox([self.slider])
+        self._slider_place = w.VBox([self.slider], layout=w.Layout(overflow="visible"))
         self.where = _line("sb-where")
         self.to_start, self.to_last, self.to_next, self.to_longest = (
             w.Button(description=text, tooltip=tip, layout=w.Layout(width="auto"))

@@ -143,6 +143,22 @@ def test_a_file_of_ones_own_by_path_and_by_upload(page: Any, folder: Path, tmp_p
     page.get_by_role("button", name="Load", exact=True).click()
     page.locator(".sb-head").filter(has_text="mine: n = 30").wait_for()
 
+    # one large enough for many shifts and deflation windows, and for pooled pictures
+    np.save(folder / "many.npy", np.random.default_rng(42).standard_normal((300, 300)))
+    page.get_by_label("Path", exact=True).fill("many.npy")
+    page.get_by_label("Path", exact=True).press("Tab")
+    page.get_by_role("button", name="Load", exact=True).click()
+    page.locator(".sb-head").filter(has_text="many: n = 300").wait_for()
+    page.locator(".sb-where").filter(has_text=f"of {len(sb.iterate(folder / 'many.npy').steps)}:").wait_for()
+    page.get_by_role("button", name="start", exact=True).click()
+    page.locator(".sb-step .noUi-handle").focus()
+    page.keyboard.press("ArrowRight")
+    page.get_by_text("looked into a deflation window of").wait_for()
+    page.wait_for_timeout(800)
+    page.wait_for_function(ALL_DRAWN)
+    shot(page, "deflation-window-1280")
+    assert page.evaluate(FAULTS) == []
+
     # larger than the 10 MB that the server would take by default, which counts after encoding as text
     large = tmp_path / "large.npy"
     np.save(large, np.triu(np.ones((1200, 1200))))

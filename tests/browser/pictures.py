@@ -14,7 +14,7 @@ from tests.browser.lab import chromium_page, lab_server, open_notebook, run_all,
 from tests.browser.seen import ALL_DRAWN, FAULTS, ROOT
 from tests.conftest import find_chromium
 
-PICTURE = ROOT / "docs" / "workbench.png"
+PICTURE = ROOT / "notebooks" / "workbench.png"
 
 
 def main() -> int:

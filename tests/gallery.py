@@ -40,7 +40,7 @@ def _spread(n: int, kind: str, rng: np.random.Generator, complex_: bool) -> np.n
 
 
 def lapack_types(n: int, complex_: bool) -> Iterator[tuple[str, np.ndarray]]:
-    """Yield (name, matrix) for the 21 types at order n; the name holds the seed."""
+    """Yield (name, matrix) for the 21 types at order n; the name says how it was drawn."""
     dtype = complex if complex_ else float
     for number in range(1, 22):
         seed = 1000 * number + n

@@ -18,29 +18,13 @@ from schurbench.diagnosis.figures import healthy_figures
 from schurbench.diagnosis.page import CAUTION, html_page, page
 from schurbench.matching import pair_spectra
 from schurbench.measures import RATIO_LIMIT
+from tests.gallery import cyclic, day
 
 DATA = Path(__file__).parent / "data"
 
 
 def gaussian(n: int, rng: np.random.Generator) -> np.ndarray:
     return rng.standard_normal((n, n))
-
-
-def cyclic(n: int) -> np.ndarray:
-    """Cyclic permutation; its eigenvalues are the n-th roots of unity."""
-    return np.roll(np.eye(n), 1, axis=0)
-
-
-def day(n: int, eta: float) -> np.ndarray:
-    """Day's family (D. Day, SAND96-0913, 1996): double shifts without exceptional ones stall on it.
-
-    Order 2n; blkdiag([0 1; 1 0]) with η at (2i+1, 2i) and in the corner. Eigenvalues ±√(1 + η e^{2πik/n}).
-    """
-    a = np.kron(np.eye(n), np.array([[0.0, 1.0], [1.0, 0.0]]))
-    for i in range(1, n):
-        a[2 * i, 2 * i - 1] = eta
-    a[0, 2 * n - 1] = eta
-    return a
 
 
 def rotation_blocks(blocks: int, rng: np.random.Generator) -> np.ndarray:

@@ -21,6 +21,7 @@ from schurbench.factors.reorder import bring_to_top
 from schurbench.factors.triangular import eigenvalues_of, is_exact, restore_underflowed_blocks, solve_small_blocks
 from schurbench.matching import pair_spectra
 from schurbench.measures import RATIO_LIMIT, ULP, orthogonality_ratio, residual_ratio
+from tests.gallery import frank, rosser
 
 MATRICES = [
     "closedloop_carex15.npz",
@@ -41,29 +42,8 @@ SETTINGS: list[dict[str, Any]] = [
 ]
 
 
-def frank(n: int) -> np.ndarray:
-    """Frank's matrix: a_ij = n − max(i, j) + 1 for j ≥ i − 1, counted from 1, and 0 below."""
-    i, j = np.indices((n, n)) + 1
-    return np.where(j >= i - 1, n - np.maximum(i, j) + 1.0, 0.0)
-
-
 def tridiagonal(below: Any, on: Any, above: Any) -> np.ndarray:
     return np.diag(np.asarray(below, float), -1) + np.diag(np.asarray(on, float)) + np.diag(np.asarray(above, float), 1)
-
-
-ROSSER = np.array(
-    [
-        [611, 196, -192, 407, -8, -52, -49, 29],
-        [196, 899, 113, -192, -71, -43, -8, -44],
-        [-192, 113, 899, 196, 61, 49, 8, 52],
-        [407, -192, 196, 611, 8, 44, 59, -23],
-        [-8, -71, 61, 8, 411, -599, 208, 208],
-        [-52, -43, 49, 44, -599, 411, 208, 208],
-        [-49, -8, 8, 59, 208, 208, 99, -911],
-        [29, -44, 52, -23, 208, 208, -911, 99],
-    ],
-    dtype=float,
-)
 
 
 def within_conditioning(factors: sb.Factors, exact: np.ndarray, published_digits: float = 0.0) -> None:
@@ -146,7 +126,7 @@ def test_rosser_as_published() -> None:
     # Rosser, Lanczos, Hestenes and Karush, J. Res. NBS 47, 1951.
     r = np.sqrt(10405.0)
     exact = np.array([-10 * r, 0, 510 - 100 * np.sqrt(26), 1000, 1000, 510 + 100 * np.sqrt(26), 1020, 10 * r])
-    within_conditioning(sb.iterate(ROSSER).factors(), exact)
+    within_conditioning(sb.iterate(rosser()).factors(), exact)
 
 
 def test_wilkinson_21_pair_is_told_apart_only_as_far_as_it_can_be() -> None:

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable
 from copy import copy
 from threading import RLock
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -186,6 +186,14 @@ class Journal:
         if not count:
             return np.empty((0, 3, self.n), dtype=self.band_type)
         return np.stack([self.bands(k) for k in range(count)])
+
+    def __getstate__(self) -> dict[str, Any]:
+        # a lock stays in its process; runs travel between processes when a comparison is spread over them
+        return {name: value for name, value in self.__dict__.items() if name != "_replaying"}
+
+    def __setstate__(self, state: dict[str, Any]) -> None:
+        self.__dict__.update(state)
+        self._replaying = RLock()
 
     def snapshot(self) -> Journal:
         """A journal of its own with what is recorded so far; the arrays, which no one changes, are shared."""

@@ -7,13 +7,13 @@ import math
 import numpy as np
 
 from schurbench.diagnosis.case import Case
-from schurbench.diagnosis.finding import Finding, Rank
+from schurbench.diagnosis.finding import Finding, Rank, SettingsRemedy
 from schurbench.diagnosis.remedies import change
 from schurbench.measures import ULP
 from schurbench.prepare.plain import number, ten_to
 from schurbench.prepare.profile import BALANCE_REMARK
 
-__all__ = ["PoorScaling"]
+__all__ = ["PoorScaling", "scaling"]
 
 #: Decades of scale factors beyond which scaling itself may lift rounding noise above small entries.
 _WIDE = -math.log10(ULP)
@@ -34,7 +34,6 @@ class PoorScaling:
         noise = run.n * ULP * run.norm
         hidden = int(np.count_nonzero(sizes < noise))
         rescued = int(np.count_nonzero((sizes < noise) & (sizes >= noise / p.balance_factor)))
-        choice = "both" if run.settings.balance == "permute" else p.balance_choice
         statement = (
             f"Rows differ by {ten_to(p.row_norm_decades)} in norm and balancing would shrink the 1-norm "
             f"{number(p.balance_factor)}-fold; rounding at the present norm reaches {number(_units(case, noise))}"
@@ -62,13 +61,17 @@ class PoorScaling:
                 "of_those_above_it_when_balanced": rescued,
             },
             confidence=round(min(0.99, 0.6 + 0.1 * math.log10(p.balance_factor)) * (0.7 if wide else 1.0), 3),
-            remedy=change(
-                case,
-                "Scale rows and columns before the reduction, which scipy.linalg.schur never does.",
-                balance=choice,
-            ),
+            remedy=scaling(case),
             rank=Rank.EIGENVALUES,
         )
+
+
+def scaling(case: Case) -> SettingsRemedy:
+    """The remedy of everything that comes from poor scaling."""
+    choice = "both" if case.run.settings.balance == "permute" else case.profile.balance_choice
+    return change(
+        case, "Scale rows and columns before the reduction, which scipy.linalg.schur never does.", balance=choice
+    )
 
 
 def _units(case: Case, value: float) -> float:

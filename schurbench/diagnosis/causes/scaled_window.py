@@ -6,8 +6,8 @@ import numpy as np
 
 from schurbench.diagnosis.case import Case, Stretch
 from schurbench.diagnosis.causes.base import Judgement, all_rows, more_stretches, sweeps_of
+from schurbench.diagnosis.causes.poor_scaling import scaling
 from schurbench.diagnosis.finding import Finding
-from schurbench.diagnosis.remedies import change
 from schurbench.measures import frobenius
 from schurbench.prepare.plain import number
 from schurbench.prepare.profile import BALANCE_REMARK
@@ -59,7 +59,6 @@ class ScaledWindow:
             f"a block say little; balancing would shrink the 1-norm of the matrix "
             f"{number(worst.evidence['balance_factor'])}-fold{case.carriers(worst.rows)}."
         )
-        choice = "both" if case.run.settings.balance == "permute" else case.profile.balance_choice
         return Finding(
             cause=self.code,
             statement=statement + more_stretches(judgements),
@@ -67,9 +66,5 @@ class ScaledWindow:
             rows=all_rows(judgements),
             steps=sweeps_of(judgements),
             confidence=worst.confidence,
-            remedy=change(
-                case,
-                "Scale rows and columns before the reduction, which scipy.linalg.schur never does.",
-                balance=choice,
-            ),
+            remedy=scaling(case),
         )

@@ -26,6 +26,8 @@ class ScaledWindow:
 
     def judge(self, case: Case, stretch: Stretch) -> Judgement | None:
         """Fits when balancing was left out, would help, and the window's norm dwarfs its eigenvalues."""
+        if stretch.length <= case.healthy.longest_wait:
+            return None  # as long as in a healthy run, so that there is nothing to put down to the scaling
         lo, hi = stretch.window
         factor = case.profile.balance_factor
         if case.run.settings.balance in ("scale", "both") or factor < BALANCE_REMARK or not case.known(stretch):

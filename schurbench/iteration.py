@@ -47,12 +47,12 @@ from schurbench.settings import check_limits, recorded_strategy, resolve
 
 __all__ = ["Iteration", "drive", "iterate"]
 
-#: Sweeps without any deflation after which a run counts as stalled: five times the longest wait seen on healthy
-#: matrices (12 sweeps, double shift, Gaussian matrices of n = 20 to 200).
+#: Sweeps without any deflation after which a run counts as stalled: more than three times the longest wait seen on healthy
+#: matrices (18 sweeps, `schurbench.diagnosis.figures`).
 STALLED_AFTER = 60
 
-#: Sweeps, in units of n, before rounding in H and Z is measured for the first time, and between two measurements. Runs that
-#: converge need less than 6 n (3.4 n is usual for single shifts); a measurement costs three matrix products.
+#: Sweeps, in units of n, before rounding in H and Z is measured for the first time, and between two measurements. Healthy
+#: runs end before (3.4 n is usual for single shifts); a measurement costs four matrix products.
 _ROUNDING_FIRST, _ROUNDING_EVERY = 6, 2
 
 #: Longest interval between two progress calls, seconds; more often would cost more than it tells.
@@ -245,7 +245,7 @@ class Iteration:
         return self._waited
 
     def step(self) -> Step:
-        """Do one sweep on the active window and scan it for negligible entries.
+        """Do one sweep on the active window, or look into a deflation window, and scan for negligible entries.
 
         Returns
         -------
@@ -472,6 +472,7 @@ class Iteration:
 
     def _undo(self) -> None:
         """Back to the last recorded state after a step was broken off in the middle."""
+        self._journal.mend()
         H, Qh = self._journal.rebuild(len(self._journal.steps))
         self._H[:] = H
         self._Qh[:] = Qh

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import threading
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
@@ -11,6 +12,8 @@ import pytest
 
 import schurbench as sb
 from schurbench.journal import DeflationKind, StepKind, StopReason
+from schurbench.journal.journal import Journal
+from schurbench.journal.store import RunStore
 from schurbench.measures import RATIO_LIMIT, orthogonality_ratio, residual_ratio
 from schurbench.policy import Francis, Given, WindowView
 from tests.gallery import cyclic, day, matched_distance
@@ -356,6 +359,67 @@ def test_keyboard_interrupt_keeps_what_was_done() -> None:
     assert run.sweeps == 7
     whole = sb.iterate(a)
     np.testing.assert_array_equal(run.state(7).H, whole.state(7).H)
+
+
+def step_to_the_end(it: sb.Iteration) -> None:
+    while not it.done:
+        it.step()
+
+
+class Interrupting(list):
+    """A list to which nothing is appended the first time: an interrupt came in between."""
+
+    armed = True
+
+    def append(self, item: object) -> None:
+        if self.armed:
+            self.armed = False
+            raise KeyboardInterrupt
+        super().append(item)
+
+
+@pytest.mark.parametrize(
+    ("where", "stored"),
+    [*itertools.product(["steps", "windows", "_chunks", "bands", "checkpoint"], [False, True]), ("store", True)],
+)
+def test_an_interrupt_while_recording_leaves_a_whole_record(
+    where: str, stored: bool, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Whatever had been written of the step when it came, the record is that of whole steps, and the run can go on."""
+    a = gaussian(30, 3)
+    whole = sb.iterate(a, "rayleigh", limit=500)
+    it = sb.Iteration(a, "rayleigh", limit=500, store=tmp_path / "run" if stored else None)
+    journal = it._journal
+    steps_before = 0 if where == "checkpoint" else 200
+    while len(journal.steps) < steps_before:
+        it.step()
+    if where in ("steps", "windows", "_chunks"):
+        setattr(journal, where, Interrupting(getattr(journal, where)))
+    else:
+        owner = RunStore if where == "store" else Journal
+        method = {"bands": "_keep_bands", "checkpoint": "_room", "store": "add"}[where]
+        original, armed = getattr(owner, method), [True]
+
+        def interrupted(self: Journal | RunStore, *arguments: object) -> object:
+            if armed.pop() if armed else False:
+                raise KeyboardInterrupt
+            return original(self, *arguments)
+
+        monkeypatch.setattr(owner, method, interrupted)
+    with pytest.raises(KeyboardInterrupt):
+        step_to_the_end(it)
+    last = len(journal.steps)
+    assert len(journal.windows) == last + 1
+    assert last >= steps_before
+    np.testing.assert_array_equal(it.H, whole.state(last).H)
+    step_to_the_end(it)
+    run = it.run()
+    assert [(s.window, s.shifts) for s in run.steps] == [(s.window, s.shifts) for s in whole.steps]
+    np.testing.assert_array_equal(run.state(len(run.steps)).H, whole.state(len(whole.steps)).H)
+    runs = [run, sb.open_run(tmp_path / "run")] if stored else [run]
+    for k in range(len(run.steps) + 1):
+        for kept in runs:
+            np.testing.assert_array_equal(kept.subdiagonal(k), whole.subdiagonal(k))
 
 
 def test_published_stalls_without_exceptional_shifts() -> None:

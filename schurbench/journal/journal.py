@@ -92,6 +92,14 @@ class Journal:
             if self.store.wants_checkpoint(work, self.n):
                 self.store.add_checkpoint(step.index, *(copied or (H.copy(), Qh.copy())))
 
+    def mend(self) -> None:
+        """Make the record whole again when an interrupt came while a step was recorded."""
+        del self.steps[len(self.windows) - 1 :]
+        self._last = None  # may be that of an earlier state
+        if self.store is not None and self.store.held:
+            for k in range(self.store.added, len(self.windows)):
+                self.store.add(self.steps[k - 1] if k else None, self.windows[k], self.bands(k).copy())
+
     def _room(self) -> bool:
         """Whether one more checkpoint fits in the budget."""
         return (len(self.checkpoints) + 1) * self._state_bytes <= self.keep
@@ -104,7 +112,7 @@ class Journal:
             slot > 0 or not self._chunks or len(self._chunks) * _CHUNK * self._band_bytes < self.keep
         )
         if fits:
-            if slot == 0:
+            if slot == 0 and len(self._chunks) * _CHUNK == self._banded:  # it is there if an interrupt came after it
                 self._chunks.append(np.empty((_CHUNK, 3, self.n), dtype=self.band_type))
             out: Array = self._chunks[-1][slot]
             self._banded += 1

@@ -433,6 +433,15 @@ class RunStore:
             self._told = now
             self._start(None)
 
+    @property
+    def added(self) -> int:
+        """States given to the store, whether written yet or not."""
+        if self._waiting:
+            step = self._waiting[-1][0]
+            return 1 if step is None else step.index + 1
+        self.settle()
+        return self.states
+
     def wants_checkpoint(self, work: int, n: int) -> bool:
         """Whether the state after so much more work should be kept whole."""
         self._work += work
